@@ -1,0 +1,16 @@
+"""Fluxes to Stokes parameters: modulation rows, pair methods, the exact model on counts, nulls and limits."""
+
+from hwpol.demodulation.demodulate import Solution, demodulate, fit_counts
+from hwpol.demodulation.limits import photon_covariance
+from hwpol.demodulation.modulation import modulation_rows
+from hwpol.demodulation.nulls import half_turn_null, time_null
+
+__all__ = [
+    "Solution",
+    "demodulate",
+    "fit_counts",
+    "half_turn_null",
+    "modulation_rows",
+    "photon_covariance",
+    "time_null",
+]

@@ -1,0 +1,339 @@
+"""Fluxes to Stokes parameters: the public verb."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hwpol.demodulation.counts import LEAST_INFORMATION, CountFit, Gains, information, solve_counts
+from hwpol.demodulation.modulation import modulation_rows, positions
+from hwpol.demodulation.pairs import check_beams, solve_pairs
+from hwpol.errors import InputError
+from hwpol.flags import Flag
+from hwpol.fluxes import Fluxes
+from hwpol.stokes import (
+    Stokes,
+    instrument_from_sky,
+    mean_angle,
+    observed_from_instrument,
+    observed_slopes,
+    real_slopes,
+)
+
+Array = NDArray[np.float64]
+
+METHODS = ("least-squares", "double-difference", "double-ratio")
+GAINS = ("visit", "cycle", "night", "fixed")
+
+
+def demodulate(
+    fluxes: Fluxes,
+    *,
+    method: str = "least-squares",
+    per: str = "visit",
+    gain: str = "visit",
+    circular: bool = False,
+    calibration: Any = None,
+) -> Stokes:
+    """Recover q and u (and v) of every source.
+
+    Parameters
+    ----------
+    fluxes : Fluxes
+        One visit.
+    method : {"least-squares", "double-difference", "double-ratio"}
+        The last two need two perpendicular beams and wave-plate positions 45 deg apart.
+    per : {"visit", "cycle"}
+        "cycle" adds an axis: arrays (source, cycle).
+    gain : {"visit", "cycle", "night", "fixed"}
+        Throughput of the beams relative to the first: fitted per source and visit or cycle, or "fixed" to
+        ``fluxes.throughput`` (with its error as a prior where given). "night" is "visit" here: only the
+        reduction of a night sees other visits, and it hands their gain on as a throughput with its error.
+    circular : bool
+        Solve for v too; NaN where the angles and the retardance do not determine it.
+    calibration : Calibration, optional
+        Solve for the sky directly, each frame with its own chi, eta and instrumental polarisation.
+
+    Returns
+    -------
+    Stokes
+        Instrument frame as observed, or sky with `calibration`. NaN and ``Flag.UNDETERMINED`` where the
+        angles do not determine q and u.
+
+    Raises
+    ------
+    InputError
+        Unknown option, or a pair method on data that cannot be paired.
+    """
+    for name, value, allowed in (
+        ("method", method, METHODS),
+        ("per", per, ("visit", "cycle")),
+        ("gain", gain, GAINS),
+    ):
+        if value not in allowed:
+            raise InputError(f"{name} = {value!r}: expected one of {', '.join(map(repr, allowed))}")
+    if circular and method != "least-squares":
+        raise InputError("circular = true needs method = 'least-squares'")
+    if per == "cycle":
+        return _per_cycle(fluxes, method=method, gain=gain, circular=circular, calibration=calibration)
+    if method == "least-squares":
+        solution = fit_counts(fluxes, gain=gain, circular=circular, calibration=calibration)
+        return solution.stokes
+    check_beams(fluxes.analyser)
+    rows = modulation_rows(fluxes.wave_plate, fluxes.analyser, fluxes.retardance)
+    z, covariance, chi2, dof = solve_pairs(fluxes.flux, fluxes.variance, rows, fluxes.wave_plate, method)
+    stokes = _label(fluxes, z, covariance, chi2, dof, "instrument")
+    return stokes if calibration is None else calibration.apply(stokes)
+
+
+@dataclass(frozen=True)
+class Solution:
+    """A least-squares solve with what its diagnosis needs.
+
+    `gain`, `gain_err` (S, B): throughput of each beam relative to the first (of the visit; NaN for "cycle").
+    """
+
+    stokes: Stokes
+    fit: CountFit
+    gain: Array
+    gain_err: Array
+
+
+def fit_counts(
+    fluxes: Fluxes, *, gain: str = "visit", circular: bool = False, calibration: Any = None
+) -> Solution:
+    """Solve one visit on counts by least squares; see `demodulate`."""
+    sources, frames, beams = fluxes.shape
+    flux, variance = fluxes.flux, fluxes.variance
+    if beams > 1:
+        whole = np.isfinite(flux) & np.isfinite(variance)
+        lonely = whole.sum(axis=2, keepdims=True) < 2
+        flux = np.where(lonely, np.nan, flux)
+    size = 3 if circular else 2
+    gains = _gains(fluxes, gain)
+    rows = modulation_rows(fluxes.wave_plate, fluxes.analyser, fluxes.retardance)
+    if circular and not _determined(fluxes, rows, flux, gains, 3, calibration).any():
+        size = 2
+    determined = _determined(fluxes, rows, flux, gains, size, calibration)
+    model = _sky_model(fluxes, rows, size, calibration)
+    if beams == 1:
+        # One beam: the frames of the visit stand in for the beams of one frame, of known relative brightness.
+        fit = solve_counts(
+            _as_beams(flux), _as_beams(variance), lambda z: _as_beams_model(*model(z)), size, gains
+        )
+    else:
+        fit = solve_counts(flux, variance, model, size, gains)
+    z = np.where(determined[:, None], fit.z, np.nan)
+    covariance = np.where(determined[:, None, None], fit.covariance, np.nan)
+    stokes = _label(
+        fluxes, z, covariance, fit.chi2, fit.dof, "instrument" if calibration is None else "sky", circular=circular
+    )
+    if calibration is not None:
+        stokes = calibration.with_error(stokes)
+    log_gain = np.zeros((sources, beams))
+    log_gain_var = np.zeros((sources, beams))
+    if beams > 1 and gain != "cycle" and gains.number:
+        log_gain[:, 1:], log_gain_var[:, 1:] = fit.log_gain, fit.log_gain_variance
+    elif gain == "cycle":
+        log_gain[:, 1:] = log_gain_var[:, 1:] = np.nan
+    value = np.exp(log_gain) * (fluxes.throughput if gain == "fixed" else 1.0)
+    return Solution(stokes, fit, value, value * np.sqrt(log_gain_var))
+
+
+def _as_beams(values: Array) -> Array:
+    return values[:, None, :, 0]
+
+
+def _as_beams_model(x: Array, slopes: Array) -> tuple[Array, Array]:
+    return x[:, None, :, 0], slopes[:, None, :, 0]
+
+
+def _gains(fluxes: Fluxes, gain: str) -> Gains:
+    _, frames, beams = fluxes.shape
+    if beams == 1:
+        with np.errstate(divide="ignore"):
+            relative = np.log(fluxes.exposure / np.nanmean(fluxes.exposure))
+        none = np.zeros((1, 0))
+        return Gains(np.zeros((1, frames), dtype=int), 0, relative[None, :], none, none)
+    known = np.log(fluxes.throughput / fluxes.throughput[0])
+    if gain == "fixed":
+        loose = np.isfinite(fluxes.throughput_err) & (fluxes.throughput_err > 0)
+        loose[0] = False
+        number = int(loose.sum())
+        index = np.broadcast_to(np.where(loose, np.cumsum(loose), 0), (frames, beams))
+        prior_variance = (fluxes.throughput_err / fluxes.throughput)[loose] ** 2
+        fixed = np.broadcast_to(known, (frames, beams))
+        return Gains(index, number, fixed, np.zeros((1, number)), prior_variance[None, :])
+    index = np.broadcast_to(np.arange(beams), (frames, beams))
+    number = beams - 1
+    if gain == "cycle":
+        cycle = np.unique(fluxes.cycle, return_inverse=True)[1]
+        number = (beams - 1) * (int(cycle.max(initial=0)) + 1)
+        index = np.where(index > 0, index + cycle[:, None] * (beams - 1), 0)
+    free = np.full((1, number), np.inf)
+    return Gains(index, number, np.zeros((frames, beams)), np.zeros((1, number)), free)
+
+
+def _sky_model(fluxes: Fluxes, rows: Array, size: int, calibration: Any) -> Any:
+    """Return the function z -> x, dx/dz: the rows alone, or through sky, instrument and its polarisation."""
+    coefficients = rows[..., :size]
+    sources = fluxes.shape[0]
+
+    def plain_model(z: Array) -> tuple[Array, Array]:
+        x = np.einsum("kbp,sp->skb", coefficients, z)
+        return x, np.broadcast_to(coefficients, (sources, *coefficients.shape))
+
+    if calibration is None:
+        return plain_model
+    chi, eta, sense = fluxes.position_angle, fluxes.parallactic, fluxes.sense
+    ip, amplitude = calibration.terms(fluxes.filter, fluxes.x, fluxes.y, chi, eta, sense)
+    unit = instrument_from_sky(np.ones(chi.shape), chi, sense)
+
+    def sky_model(z: Array) -> tuple[Array, Array]:
+        inside = instrument_from_sky(z[:, :1] + 1j * z[:, 1:2], chi, sense)
+        observed = observed_from_instrument(inside, ip, amplitude)
+        a, b = observed_slopes(inside, ip, amplitude)
+        if sense > 0:
+            a, b = a * unit, b * np.conj(unit)
+        else:
+            a, b = b * np.conj(unit), a * unit
+        jacobian = real_slopes(a, b)
+        x = rows[..., 0] * observed.real[..., None] + rows[..., 1] * observed.imag[..., None]
+        slopes = np.einsum("kbi,skij->skbj", rows[..., :2], jacobian)
+        if size == 3:
+            x = x + rows[..., 2] * sense * z[:, 2, None, None]
+            last = np.broadcast_to(rows[..., 2:] * sense, (*slopes.shape[:-1], 1))
+            slopes = np.concatenate([slopes, last], axis=-1)
+        return x, slopes
+
+    return sky_model
+
+
+def _determined(
+    fluxes: Fluxes, rows: Array, flux: Array, gains: Gains, size: int, calibration: Any
+) -> NDArray[np.bool_]:
+    """Whether the positions (readings within the usual tolerance taken as one) determine z, per source."""
+    period = 180.0 if np.all(fluxes.retardance == 180.0) else 360.0
+    rounded = modulation_rows(positions(fluxes.wave_plate, period=period), fluxes.analyser, fluxes.retardance)
+    model = _sky_model(fluxes, rounded, size, calibration)
+    _, slopes = model(np.zeros((fluxes.shape[0], size)))
+    valid = np.isfinite(flux)
+    if fluxes.shape[2] == 1:
+        valid, slopes = _as_beams(valid), slopes[:, None, :, 0]
+        scale = max(fluxes.shape[1], 1)
+    else:
+        scale = 1
+    matrix = information(valid, np.asarray(slopes), gains) / scale
+    return np.linalg.eigvalsh(matrix)[:, 0] > LEAST_INFORMATION
+
+
+def _label(
+    fluxes: Fluxes,
+    z: Array,
+    covariance: Array,
+    chi2: Array,
+    dof: NDArray[np.int_],
+    frame: str,
+    circular: bool = False,
+) -> Stokes:
+    undetermined = ~np.all(np.isfinite(z[:, :2]), axis=1)
+    used = np.isfinite(fluxes.flux)
+    chi, chi_spread = mean_angle(fluxes.position_angle)
+    eta, _ = mean_angle(fluxes.parallactic)
+    _, turn_spread = mean_angle(fluxes.parallactic - fluxes.position_angle)
+    times = fluxes.mjd[np.isfinite(fluxes.mjd)]
+    v = None
+    if circular:
+        v = z[:, 2] if z.shape[1] == 3 else np.full(len(z), np.nan)
+        if z.shape[1] == 2:
+            wide = np.full((len(z), 3, 3), np.nan)
+            wide[:, :2, :2] = covariance
+            covariance = wide
+    flags = np.bitwise_or.reduce(fluxes.flags, axis=(1, 2)) if fluxes.flags.size else np.zeros(len(z), dtype=int)
+    return Stokes(
+        q=z[:, 0],
+        u=z[:, 1],
+        v=v,
+        i=np.where(used.any(axis=(1, 2)), np.nansum(fluxes.flux, axis=(1, 2)), np.nan),
+        covariance=covariance,
+        frame=frame,
+        position_angle=chi,
+        parallactic=None if np.isnan(eta) else eta,
+        spread=np.nanmax([chi_spread, 0.0 if np.isnan(turn_spread) else turn_spread]),
+        sense=fluxes.sense,
+        filter=fluxes.filter,
+        x=fluxes.x,
+        y=fluxes.y,
+        mjd=np.mean(times) if times.size else None,
+        flags=flags | np.where(undetermined, int(Flag.UNDETERMINED), 0),
+        name=fluxes.target,
+        chi2=chi2,
+        dof=dof,
+    )
+
+
+def _per_cycle(fluxes: Fluxes, *, method: str, gain: str, circular: bool, calibration: Any) -> Stokes:
+    cycles = np.unique(fluxes.cycle)
+    shared = fluxes
+    if method == "least-squares" and gain in {"visit", "night"} and fluxes.shape[2] > 1 and len(cycles) > 1:
+        visit = fit_counts(fluxes, gain=gain, circular=circular, calibration=calibration)
+        parts = [_cycle_with_gain(shared, cycle, visit, circular, calibration) for cycle in cycles]
+    else:
+        parts = []
+        for cycle in cycles:
+            chosen = fluxes.take_frames(fluxes.cycle == cycle)
+            try:
+                parts.append(
+                    demodulate(chosen, method=method, gain=gain, circular=circular, calibration=calibration)
+                )
+            except InputError:
+                empty = np.full((fluxes.shape[0], 2), np.nan)
+                parts.append(
+                    _label(chosen, empty, np.full((len(empty), 2, 2), np.nan), empty[:, 0],
+                           np.zeros(len(empty), dtype=int), "instrument" if calibration is None else "sky")
+                )  # fmt: skip
+    first = parts[0]
+
+    def stack(name: str, axis: int = 1) -> Any:
+        values = [getattr(part, name) for part in parts]
+        return None if values[0] is None else np.stack(values, axis=axis)
+
+    times = [np.nan if part.mjd is None else part.mjd for part in parts]
+    etas = [np.nan if part.parallactic is None else part.parallactic for part in parts]
+    return Stokes(
+        q=stack("q"), u=stack("u"), v=stack("v"), i=stack("i"), covariance=stack("covariance"),
+        frame=first.frame, position_angle=np.asarray([part.position_angle for part in parts]),
+        parallactic=None if np.all(np.isnan(etas)) else np.asarray(etas), sense=first.sense,
+        filter=first.filter, x=fluxes.x, y=fluxes.y,
+        mjd=None if np.all(np.isnan(times)) else np.asarray(times),
+        calibration_covariance=stack("calibration_covariance"), spread=np.asarray([part.spread for part in parts]),
+        flags=stack("flags"), name=first.name, chi2=stack("chi2"), dof=stack("dof"),
+    )  # fmt: skip
+
+
+def _cycle_with_gain(
+    fluxes: Fluxes, cycle: int, visit: Solution, circular: bool, calibration: Any
+) -> Stokes:
+    """Solve one cycle with the gains of its visit as prior, so that an incomplete cycle is still determined.
+
+    The gain differs from source to source, so that it is divided out of the counts instead of being named.
+    """
+    chosen = fluxes.take_frames(fluxes.cycle == cycle)
+    gain = np.where(np.isfinite(visit.gain), visit.gain, 1.0)[:, None, :]
+    relative = np.where(np.isfinite(visit.gain_err), visit.gain_err / gain[:, 0], np.nan)
+    from dataclasses import replace
+
+    error = np.nanmedian(relative, axis=0) if np.isfinite(relative).any() else np.full(gain.shape[-1], np.nan)
+    divided = replace(
+        chosen,
+        flux=chosen.flux / gain,
+        variance=chosen.variance / gain**2,
+        throughput=np.ones(gain.shape[-1]),
+        throughput_err=np.where(error > 0, error, np.nan),
+    )
+    solution = fit_counts(divided, gain="fixed", circular=circular, calibration=calibration)
+    intensity = np.where(np.isfinite(chosen.flux).any(axis=(1, 2)), np.nansum(chosen.flux, axis=(1, 2)), np.nan)
+    return replace(solution.stokes, i=intensity)
