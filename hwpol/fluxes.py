@@ -175,9 +175,7 @@ class Fluxes:
             x=np.full(sources, np.nan) if x is None else _spread("x", plain(x, "pix"), (sources,)),
             y=np.full(sources, np.nan) if y is None else _spread("y", plain(y, "pix"), (sources,)),
             mjd=_spread("mjd", times, (number,)),
-            airmass=np.full(number, np.nan)
-            if airmass is None
-            else _spread("airmass", plain(airmass), (number,)),
+            airmass=np.full(number, np.nan) if airmass is None else _spread("airmass", plain(airmass), (number,)),
             flags=_spread("flags", np.asarray(flags), counts.shape).astype(int),
             sky=None if sky is None else _spread("sky", plain(sky), counts.shape),
             filter=filter,

@@ -95,7 +95,7 @@ CYCLES: tuple[Column, ...] = (
 )
 
 FRAMES: tuple[Column, ...] = _columns(
-    ("file", "text", "", "meta.file", "file name, relative to the night file where it lies below it"),
+    ("file", "text", "", "meta.id", "file name, relative to the night file where it lies below it"),
     ("kind", "text", "", "meta.code", "bias, dark, flat, science or empty"),
     ("object", "text", "", "meta.id", "object as in the header"),
     ("filter", "text", "", "meta.id;instr.filter", "filter as in the header"),

@@ -29,7 +29,7 @@ def turn(angle: ArrayLike) -> Complex:
 
 
 def sky_from_instrument(z: ArrayLike, chi: ArrayLike, sense: int) -> Complex:
-    """Bring z from the instrument frame to the sky: exp(2 i chi) z, of conj(z) where the image is mirrored (sense -1)."""
+    """Bring z from the instrument frame to the sky: exp(2 i chi) z, or exp(2 i chi) conj(z) for sense -1 (mirrored)."""
     value = np.asarray(z, dtype=complex)
     return np.asarray(turn(chi) * (value if sense > 0 else np.conj(value)))
 
@@ -77,9 +77,7 @@ def real_slopes(a: ArrayLike, b: ArrayLike) -> Array:
     """Real 2 x 2 Jacobian, shape (..., 2, 2), of  dz' = a dz + b conj(dz)  in (q, u)."""
     plus = np.asarray(a, dtype=complex) + np.asarray(b, dtype=complex)
     minus = np.asarray(a, dtype=complex) - np.asarray(b, dtype=complex)
-    return np.stack(
-        [np.stack([plus.real, -minus.imag], axis=-1), np.stack([plus.imag, minus.real], axis=-1)], axis=-2
-    )
+    return np.stack([np.stack([plus.real, -minus.imag], axis=-1), np.stack([plus.imag, minus.real], axis=-1)], axis=-2)
 
 
 def sky_slopes(chi: ArrayLike, sense: int) -> tuple[Complex, Complex]:
@@ -188,9 +186,7 @@ class Stokes:
         covariance = plain(self.covariance)
         size = 2 if self.v is None else 3
         if covariance.shape[-2:] not in {(2, 2), (size, size)}:
-            raise InputError(
-                f"Stokes: covariance has shape {covariance.shape}, expected {(*q.shape, size, size)}"
-            )
+            raise InputError(f"Stokes: covariance has shape {covariance.shape}, expected {(*q.shape, size, size)}")
         try:
             covariance = np.broadcast_to(covariance, q.shape + covariance.shape[-2:]).copy()
         except ValueError:

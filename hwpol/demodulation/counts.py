@@ -146,7 +146,7 @@ def solve_counts(flux: Array, variance: Array, modulation: Modulation, size: int
     Weights use the variance that the model predicts, var + min(1, var / f) (model - f), so that a downward
     fluctuation does not gain weight: with weights from the counts themselves z would be biased at low counts.
     """
-    sources, frames, beams = flux.shape
+    sources = flux.shape[0]
     valid = np.isfinite(flux) & np.isfinite(variance) & (variance > 0)
     data = np.where(valid, flux, 0.0)
     noise = np.where(valid, variance, 1.0)
@@ -209,9 +209,7 @@ def solve_counts(flux: Array, variance: Array, modulation: Modulation, size: int
     )
 
 
-def _first_gains(
-    data: Array, valid: NDArray[np.bool_], gains: Gains, prior: Array, prior_weight: Array
-) -> Array:
+def _first_gains(data: Array, valid: NDArray[np.bool_], gains: Gains, prior: Array, prior_weight: Array) -> Array:
     """Start values of ln g from the sums of counts where both the first beam and this one were counted."""
     start = np.where(prior_weight > 0, prior, 0.0)
     both = valid & valid[..., :1]

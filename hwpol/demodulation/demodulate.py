@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -102,11 +102,9 @@ class Solution:
     gain_err: Array
 
 
-def fit_counts(
-    fluxes: Fluxes, *, gain: str = "visit", circular: bool = False, calibration: Any = None
-) -> Solution:
+def fit_counts(fluxes: Fluxes, *, gain: str = "visit", circular: bool = False, calibration: Any = None) -> Solution:
     """Solve one visit on counts by least squares; see `demodulate`."""
-    sources, frames, beams = fluxes.shape
+    sources, _, beams = fluxes.shape
     flux, variance = fluxes.flux, fluxes.variance
     if beams > 1:
         whole = np.isfinite(flux) & np.isfinite(variance)
@@ -121,9 +119,7 @@ def fit_counts(
     model = _sky_model(fluxes, rows, size, calibration)
     if beams == 1:
         # One beam: the frames of the visit stand in for the beams of one frame, of known relative brightness.
-        fit = solve_counts(
-            _as_beams(flux), _as_beams(variance), lambda z: _as_beams_model(*model(z)), size, gains
-        )
+        fit = solve_counts(_as_beams(flux), _as_beams(variance), lambda z: _as_beams_model(*model(z)), size, gains)
     else:
         fit = solve_counts(flux, variance, model, size, gains)
     z = np.where(determined[:, None], fit.z, np.nan)
@@ -286,9 +282,7 @@ def _per_cycle(fluxes: Fluxes, *, method: str, gain: str, circular: bool, calibr
         for cycle in cycles:
             chosen = fluxes.take_frames(fluxes.cycle == cycle)
             try:
-                parts.append(
-                    demodulate(chosen, method=method, gain=gain, circular=circular, calibration=calibration)
-                )
+                parts.append(demodulate(chosen, method=method, gain=gain, circular=circular, calibration=calibration))
             except InputError:
                 empty = np.full((fluxes.shape[0], 2), np.nan)
                 parts.append(
@@ -314,9 +308,7 @@ def _per_cycle(fluxes: Fluxes, *, method: str, gain: str, circular: bool, calibr
     )  # fmt: skip
 
 
-def _cycle_with_gain(
-    fluxes: Fluxes, cycle: int, visit: Solution, circular: bool, calibration: Any
-) -> Stokes:
+def _cycle_with_gain(fluxes: Fluxes, cycle: int, visit: Solution, circular: bool, calibration: Any) -> Stokes:
     """Solve one cycle with the gains of its visit as prior, so that an incomplete cycle is still determined.
 
     The gain differs from source to source, so that it is divided out of the counts instead of being named.
@@ -324,8 +316,6 @@ def _cycle_with_gain(
     chosen = fluxes.take_frames(fluxes.cycle == cycle)
     gain = np.where(np.isfinite(visit.gain), visit.gain, 1.0)[:, None, :]
     relative = np.where(np.isfinite(visit.gain_err), visit.gain_err / gain[:, 0], np.nan)
-    from dataclasses import replace
-
     error = np.nanmedian(relative, axis=0) if np.isfinite(relative).any() else np.full(gain.shape[-1], np.nan)
     divided = replace(
         chosen,

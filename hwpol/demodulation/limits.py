@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -24,8 +26,6 @@ def photon_covariance(fluxes: Fluxes, solution: Solution, *, gain: str = "visit"
     solution : Solution
         From `fit_counts` without a calibration.
     """
-    from dataclasses import replace
-
     fit = solution.fit
     shape = fluxes.flux.shape
     # One beam: the fit ran with frames in the place of beams.
