@@ -164,7 +164,7 @@ _equinox_key = Key("equinox", _equinox, "Equinox of the header's coordinates; IC
 _direction = _quantity(*_SCALED, _unit_key("deg", "hourangle"), _equinox_key)
 _time = _quantity(
     *_SCALED,
-    Key("format", choice("isot", "mjd", "jd"), "How the time is written; told from the value where absent."),
+    Key("format", choice("isot", "mjd", "jd"), "How the time is written.", "isot"),
     Key("marks", choice("start", "middle", "end"), "The moment of the exposure that the time marks.", "start"),
     several=2,
 )

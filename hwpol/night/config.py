@@ -145,10 +145,8 @@ def frame_paths(config: NightConfig) -> list[Path]:
     for pattern in config.frames:
         where = os.path.join(glob.escape(str(config.folder)), os.path.expanduser(pattern))
         try:
-            matches = [
-                Path(os.path.abspath(name)) for name in glob.iglob(where, recursive=True) if os.path.isfile(name)
-            ]
-        except ValueError:
+            names = [name for name in glob.iglob(where, recursive=True) if os.path.isfile(name)]
+        except ValueError:  # a NUL in the pattern
             names = []
         paths = [Path(os.path.abspath(name)) for name in names]
         matches = [path for path in paths if config.output not in path.parents]
