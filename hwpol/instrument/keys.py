@@ -104,13 +104,14 @@ def _unit(target: str, example: str) -> Single:
 
 
 def _parse_equinox(value: Any) -> float | str:
-    if isinstance(value, str) and re.fullmatch(r"[JjBb]\d{4}(\.\d{1,6})?|[Ii][Cc][Rr][Ss]", value):
-        return value.upper()
-    return float(number(at_least=1800, at_most=2200).parse(value))
+    if not isinstance(value, str):
+        return float(number(at_least=1800, at_most=2200).parse(value))
+    if not value.strip():
+        raise Unfit
+    return value.strip()
 
 
-_equinox = Single('a year such as 2000.0, "J2000", "B1950" or "ICRS"', _parse_equinox)
-_name = words("a keyword")
+_equinox = Single('a year such as 2000.0, "J2000", "B1950", "ICRS" or the keyword that holds it', _parse_equinox)
 
 
 def _keyword(found: Any) -> Keyword:
@@ -164,6 +165,7 @@ _equinox_key = Key("equinox", _equinox, "Equinox of the header's coordinates; IC
 _direction = _quantity(*_SCALED, _unit_key("deg", "hourangle"), _equinox_key)
 _time = _quantity(
     *_SCALED,
+    Key("unit", _unit("s", "h"), "Unit of a time of day that is a number, where date and time are two keywords."),
     Key("format", choice("isot", "mjd", "jd"), "How the time is written.", "isot"),
     Key("marks", choice("start", "middle", "end"), "The moment of the exposure that the time marks.", "start"),
     several=2,
@@ -180,7 +182,7 @@ KEYWORDS = Table(
         Key("ra", _direction, "Keyword of the right ascension, sexagesimal hours or decimal degrees."),
         Key("dec", _direction, "Keyword of the declination, sexagesimal or decimal degrees."),
         Key("airmass", _quantity(*_SCALED), "Keyword of the airmass; computed from [site] where absent."),
-        Key("gain", _quantity(*_SCALED, _unit_key("electron/adu", "electron/adu")), "Keyword of the gain."),
+        Key("gain", _quantity(*_SCALED), "Keyword of the gain, electron/adu; goes before that of [detector]."),
     ),
     text="a table of FITS keywords",
     build=lambda values: {name: keyword for name, keyword in values.items() if keyword is not None},
@@ -335,7 +337,11 @@ INSTRUMENT = Table(
         ),
         Key("kinds", KINDS, "Values of the kind keyword.", {}),
         Key("filters", FILTERS, "What the header's filters stand for in the standard-star tables.", {}),
-        Key("wave_plate", WAVE_PLATE, "The wave plate; absent, with its keyword, where there is none."),
+        Key(
+            "wave_plate",
+            WAVE_PLATE,
+            "The wave plate: as by default where only its keyword is given, none where that is absent too.",
+        ),
         Key("beam", ListOf(BEAM, "at least one table [[beam]]", at_least=1), "The beams, in order.", required=True),
         Key("orientation", ORIENTATION, "How the instrument sits on the sky.", {}),
         Key("site", SITE, "Where the telescope stands; needed for the parallactic angle."),

@@ -11,6 +11,7 @@ from typing import Any
 
 from hwpol.instrument.description import Band, Beam, Instrument, Orientation, WavePlate
 from hwpol.instrument.keys import INSTRUMENT
+from hwpol.instrument.names import normal_name
 from hwpol.instrument.toml_check import KeyInfo, Problems, known_keys_of, read_toml, read_tree
 
 _SAME_ANGLE = 1e-9  # deg: rounding of angles written in decimals
@@ -93,14 +94,14 @@ def _check_kinds(tree: Mapping[str, Any], kinds: dict[str, tuple[str, ...]] | No
     for kind, texts in (kinds or {}).items():
         if not _given(tree, "kinds", kind):
             continue
-        for text in dict.fromkeys(texts):
-            if text in owner:
-                problems.add(f"kinds.{kind}", text, f"a value that kinds.{owner[text]} does not list as well")
-            owner.setdefault(text, kind)
+        for text in texts:
+            other = owner.setdefault(normal_name(text), kind)
+            if other != kind:
+                problems.add(f"kinds.{kind}", text, f"a value that kinds.{other} does not list as well")
     if kinds:
         for kind, texts in kinds.items():
             if not _given(tree, "kinds", kind):
-                kinds[kind] = tuple(text for text in texts if text not in owner)
+                kinds[kind] = tuple(text for text in texts if normal_name(text) not in owner)
 
 
 def _check_beams(values: dict[str, Any], problems: Problems) -> None:

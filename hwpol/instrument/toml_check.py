@@ -14,7 +14,7 @@ import math
 import os
 import re
 import tomllib
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Final, Protocol
@@ -47,15 +47,17 @@ def shown(value: Any) -> str:
     return text if len(text) <= _SHOWN_LENGTH else text[: _SHOWN_LENGTH - 3] + "..."
 
 
-def _written(value: Any) -> str:
+def _written(value: Any, depth: int = 5) -> str:
     if isinstance(value, bool):
         return "true" if value else "false"
     if isinstance(value, str):
         return json.dumps(value, ensure_ascii=False)
+    if isinstance(value, Mapping | list | tuple) and depth == 0:
+        return "..."
     if isinstance(value, Mapping):
-        return "{" + ", ".join(f"{_quoted(key)} = {_written(item)}" for key, item in value.items()) + "}"
+        return "{" + ", ".join(f"{_quoted(key)} = {_written(item, depth - 1)}" for key, item in value.items()) + "}"
     if isinstance(value, list | tuple):
-        return "[" + ", ".join(map(_written, value)) + "]"
+        return "[" + ", ".join(_written(item, depth - 1) for item in value) + "]"
     if isinstance(value, int) and abs(value) >= 10**30:
         return "a number of more than 30 digits"
     return " ".join(str(value).split())
@@ -71,9 +73,9 @@ def joined(place: str, name: Any) -> str:
     return f"{place}.{_quoted(name)}" if place else _quoted(name)
 
 
-def nearest(name: str, known: Iterator[str] | tuple[str, ...] | list[str]) -> str:
+def nearest(name: str, known: Iterable[str]) -> str:
     """Return the known name most like `name`, or an empty text."""
-    by_case = {text.lower(): text for text in known}
+    by_case = {text.lower(): text for text in known if text != "*"}
     found = difflib.get_close_matches(name.lower(), by_case, n=1, cutoff=0.6)
     return by_case[found[0]] if found else ""
 
@@ -99,12 +101,9 @@ class Problems:
         near = nearest(str(name), allowed)
         if not near:
             elsewhere = {key.rpartition(".")[2]: key for key in reversed(self.known)}
-            near = elsewhere.get(nearest(str(name), list(elsewhere)), "")
-        self._line(
-            f"{joined(place, name)} = {shown(value)}: unknown key, expected "
-            + (f"one of {', '.join(allowed)}" if len(allowed) > 1 else f"only {allowed[0]}"),
-            near,
-        )
+            near = elsewhere.get(nearest(str(name), elsewhere), "")
+        expected = f"one of {', '.join(allowed)}" if len(allowed) > 1 else f"only {allowed[0]}"
+        self._line(f"{joined(place, name)} = {shown(value)}: unknown key, expected {expected}", near)
 
     def _line(self, text: str, near: str) -> None:
         self.lines.append(text + (f"; did you mean {json.dumps(near, ensure_ascii=False)}?" if near else ""))

@@ -35,11 +35,11 @@ kind = "FRMKIND"
 object = "OBJECT"
 filter = ["WHEEL1", "WHEEL2"]
 exposure = {keyword = "EXPTIME", unit = "ms"}
-time = ["DATE-OBS", "UT"]
+time = {keyword = ["DATE-OBS", "UT"], unit = "h"}
 wave_plate = {keyword = "PLATE", pattern = "pos([0-9]+)", scale = -0.5, zero = 3}
 position_angle = "SKYANG"
 ra = {keyword = "RA", unit = "hourangle", equinox = 2000}
-dec = {keyword = "DEC", equinox = "j2000"}
+dec = {keyword = "DEC", equinox = " EQUINOX"}
 airmass = "AIRMASS"
 gain = "EGAIN"
 
@@ -119,11 +119,11 @@ def test_the_full_file_reads_as_written(tmp_path: Path) -> None:
     words = found.keywords
     assert words["kind"] == Keyword(("FRMKIND",))
     assert words["filter"] == Keyword(("WHEEL1", "WHEEL2"))
-    assert words["time"] == Keyword(("DATE-OBS", "UT"))
+    assert words["time"] == Keyword(("DATE-OBS", "UT"), unit="h", format="isot")
     assert words["exposure"] == Keyword(("EXPTIME",), unit="ms")
     assert words["wave_plate"] == Keyword(("PLATE",), scale=-0.5, zero=3.0, pattern="pos([0-9]+)")
     assert words["ra"] == Keyword(("RA",), unit="hourangle", equinox=2000.0)
-    assert words["dec"] == Keyword(("DEC",), equinox="J2000")
+    assert words["dec"] == Keyword(("DEC",), equinox="EQUINOX")
     assert found.kinds == {
         "bias": ("bias", "zero"),
         "dark": ("dark",),
@@ -216,6 +216,10 @@ def test_the_gain_may_come_from_a_keyword_or_from_every_beam() -> None:
             'keywords.time.format = "jd": expected "isot"',
         ),
         (lambda t: t["keywords"].update(ra="RA"), "keywords.dec: missing"),
+        (
+            lambda t: t["keywords"].update(ra={"keyword": "RA", "equinox": 20}, dec="DEC"),
+            "keywords.ra.equinox = 20: expected a year",
+        ),
         (lambda t: t["keywords"].update(airmass={}), "keywords.airmass.keyword: missing"),
         (
             lambda t: t["keywords"].update(exposure={"keyword": "E", "unit": "deg"}),
@@ -228,7 +232,7 @@ def test_the_gain_may_come_from_a_keyword_or_from_every_beam() -> None:
         (lambda t: t["keywords"].update(object={"keyword": "O", "pattern": "(("}), 'keywords.object.pattern = "(("'),
         (lambda t: t["keywords"].update(exposure={"keyword": "E", "scale": 0}), "keywords.exposure.scale = 0"),
         (lambda t: t["keywords"].pop("wave_plate") and t.update(wave_plate={}), "keywords.wave_plate: missing"),
-        (lambda t: t.update(kinds={"bias": ["x"], "dark": ["X"]}), 'kinds.dark = "x"'),
+        (lambda t: t.update(kinds={"bias": ["x y"], "dark": ["X-Y"]}), 'kinds.dark = "x-y"'),
         (lambda t: t.update(filters={"R": {"wavelength": 640}}), "filters.R.wavelength = 640"),
         (lambda t: t.update(wave_plate={"retardance": 360}), "wave_plate.retardance = 360"),
         (lambda t: t.update(wave_plate={"retardance": {"V": 0}}), "wave_plate.retardance.V = 0"),

@@ -138,6 +138,13 @@ def test_values_are_shown_on_one_short_line_as_in_the_file() -> None:
     assert long.endswith("...")
 
 
+def test_deeply_nested_tables_are_shown_too(tmp_path: Path) -> None:
+    path = tmp_path / "deep.toml"
+    path.write_text("[gain" + ".a" * 3000 + "]\n[extra" + ".a" * 3000 + "]\n")
+    tree = {"name": "a", **read_toml(path)}
+    assert problems_of(tree)[1] == "gain = {a = {a = {a = {a = {a = ...}}}}}: expected a number > 0"
+
+
 def test_paths_start_at_the_folder_and_must_exist_where_asked(tmp_path: Path) -> None:
     table = Table((Key("old", FilePath("an existing file"), ""), Key("new", FilePath("a path", exists=False), "")))
     (tmp_path / "a.txt").touch()
