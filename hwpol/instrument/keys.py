@@ -271,7 +271,7 @@ BEAM = Table(
         Key("analyser", number(what="a number (deg)"), "Angle of the analyser that feeds the beam.", required=True),
         Key(
             "offset",
-            ListOf(number(), "two numbers (pixels) [x, y]", at_least=2, at_most=2),
+            ListOf(number(), "two numbers (pixels) [x, y]", length=2),
             "Pixels from the first beam, a start value; where absent that between the corners of the beams' sections, "
             "else [0.0, 0.0].",
         ),

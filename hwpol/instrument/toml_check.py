@@ -140,16 +140,18 @@ class Single:
 
 @dataclass(frozen=True)
 class ListOf:
-    """A list of `at_least` to `at_most` values of one kind, returned as a tuple."""
+    """A list of values of one kind, returned as a tuple: exactly `length` of them, or `at_least` to `at_most`."""
 
     item: Kind
     text: str
     at_least: int = 0
     at_most: float = math.inf
+    length: int | None = None
 
     def read(self, value: Any, place: str, problems: Problems) -> Any:
         """Parse every item; each bad one is a problem of its own."""
-        if not isinstance(value, list | tuple) or not self.at_least <= len(value) <= self.at_most:
+        low, high = (self.at_least, self.at_most) if self.length is None else (self.length, self.length)
+        if not isinstance(value, list | tuple) or not low <= len(value) <= high:
             problems.add(place, value, self.text)
             return BAD
         items = tuple(self.item.read(item, f"{place}[{number}]", problems) for number, item in enumerate(value, 1))

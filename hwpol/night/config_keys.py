@@ -32,7 +32,7 @@ def _extent(best: bool) -> Single:
 
 
 def _pair(item: Kind, text: str) -> ListOf:
-    return ListOf(item, text, at_least=2, at_most=2)
+    return ListOf(item, text, length=2)
 
 
 GROUPING = Table(
