@@ -118,7 +118,7 @@ class FrameSet:
             if any(_excluded(frame, pattern) for pattern in exclude):
                 frame.unread, frame.reasons = False, ["excluded by the night file"]
         _check_shapes(frames)
-        frames.sort(key=lambda frame: (frame.mjd if math.isfinite(frame.mjd) else math.inf, frame.name, frame.file))
+        frames.sort(key=_in_time)
         _find_copies(frames)
         _place(frames, targets)
         return cls(instrument, _tabulate(frames, instrument, gap))
@@ -178,6 +178,12 @@ def _distinct(paths: Iterable[str | Path]) -> list[str | Path]:
     if not kept:
         raise InputError("frames: no file given")
     return list(kept.values())
+
+
+def _in_time(frame: Frame) -> tuple[float, list[tuple[int, str]], str]:
+    """Sort key: time, then name with its numbers in order of size; frames without a time last."""
+    name = [(int(digits or 0), text) for digits, text in re.findall(r"(\d*)(\D*)", frame.name)]
+    return (frame.mjd if math.isfinite(frame.mjd) else math.inf), name, frame.file
 
 
 def _excluded(frame: Frame, pattern: str) -> bool:

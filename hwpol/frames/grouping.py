@@ -156,6 +156,8 @@ def cycles(position: ArrayLike, mjd: ArrayLike) -> NDArray[np.int64]:
         cost, stretches = _cut(sequence, pauses, repeats, start)
         if cost + starts[start] < least - _ROUNDING:
             best, least = stretches, cost + starts[start]
+        if least < _ROUNDING:
+            break
     for number, (begin, end) in enumerate(best, 1):
         numbers[order[begin:end]] = number
     return numbers

@@ -25,6 +25,8 @@ T = TypeVar("T")
 _BLOCK = 2880
 _CARD = 80
 _GZIP, _BZIP2 = b"\x1f\x8b", b"BZh"
+# Degree signs and accents break the standard; as blanks they do no harm.
+_PRINTABLE = bytes(code if 32 <= code < 127 else 32 for code in range(256))
 _SHORTEST_AIRMASS = 0.99  # rounding aside, none is below 1
 
 
@@ -113,7 +115,7 @@ def _walk(stream: IO[bytes] | gzip.GzipFile | bz2.BZ2File, size: int, packed: bo
         if raw is None:
             break
         digest.update(raw)
-        header = fits.Header.fromstring(raw)
+        header = fits.Header.fromstring(raw.translate(_PRINTABLE))
         headers.append(header)
         start = place + len(raw)
         end = start + _data_bytes(header)

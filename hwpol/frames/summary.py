@@ -11,13 +11,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hwpol.frames.frameset import FrameSet
-from hwpol.frames.geometry import time_warning
+from hwpol.frames.geometry import airmass_of, time_warning
 from hwpol.frames.grouping import position_angle
 from hwpol.instrument.description import Instrument
 
 _LISTED = 8  # files named before the rest is only counted
 _WEAK = 0.05  # share of the full modulation below which q or u counts as not measured
 _TURN = 1.0  # deg of field rotation worth a word
+_HIGH = 20.0  # deg, above which the secant is the airmass to 1 percent
+_OTHER_AIRMASS = 0.05
 _MJD_ZERO = datetime(1858, 11, 17, tzinfo=UTC)
 
 
@@ -48,9 +50,16 @@ def doubts(frames: FrameSet) -> list[str]:
     if len(science) == 0:
         return [*found, "no science frame in use: there is nothing to reduce"]
     found += _calibration_doubts(frames, science)
-    for visit in frames.visits():
+    visits = frames.visits()
+    alone = sum(len(_angles(visit)) == 1 for visit in visits)
+    if alone > 3 and alone > len(visits) / 2:
+        found.append(
+            f"{alone} of {len(visits)} visits have one plate position only: if the object's name holds the angle, "
+            "give keywords.object a pattern that leaves it out"
+        )
+    for visit in visits:
         found += _visit_doubts(visit)
-    return found + _orientation_doubts(science) + _notes(frames)
+    return found + _orientation_doubts(science) + _pointing_doubts(science) + _notes(frames)
 
 
 def determined(instrument: Instrument, filter_name: str, psi: NDArray[np.float64], *, free_gain: bool = True) -> bool:
@@ -123,9 +132,9 @@ def _visit_lines(frames: FrameSet) -> list[str]:
     visits = frames.visits()
     if not visits:
         return ["No visits."]
-    form = "{:>5}  {:<18.18} {:<8.8} {:>6} {:>5} {:>7}  {:>12}  {:<22}"
+    form = "{:>5}  {:<18.18} {:<14.14} {:>6} {:>5} {:>7}  {:>12}  {:<22}"
     heads = ("visit", "target", "filter", "frames", "plate", "cycles", "exposure (s)", "middle (UT)")
-    lines = ["Visits", form.format(*heads)]
+    lines = ["Visits", form.format(*heads).rstrip()]
     for visit in visits:
         cycles = visit.cycles()
         whole = sum(cycle.complete for cycle in cycles)
@@ -278,6 +287,22 @@ def _orientation_doubts(science: FrameSet) -> list[str]:
         warning = time_warning(science.column("mjd"))
         found += [warning] if warning else []
     return found
+
+
+def _pointing_doubts(science: FrameSet) -> list[str]:
+    """Signs that site, time and coordinates do not belong together."""
+    altitude, airmass = science.column("altitude"), science.column("airmass")
+    check = "check [site] (longitude east positive), keywords.time (UTC) and the unit of keywords.ra"
+    below = int((altitude < 0).sum())
+    if below:
+        return [f"{below} science frames point below the horizon: {check}"]
+    ratio = airmass / airmass_of(altitude)
+    ratio = ratio[(altitude > _HIGH) & np.isfinite(ratio)]
+    if ratio.size and abs(float(np.median(ratio)) - 1.0) > _OTHER_AIRMASS:
+        return [
+            f"the airmass in the headers is {np.median(ratio):.2f} times that of site, time and coordinates: {check}"
+        ]
+    return []
 
 
 def _notes(frames: FrameSet) -> list[str]:

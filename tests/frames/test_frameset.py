@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import pickle
 import shutil
 import warnings
 from collections.abc import Callable
@@ -246,6 +247,45 @@ def test_description(write: Callable[..., Path]) -> None:
     assert any(line.startswith("no dark frames") for line in found)
     assert "visit 2 (Star, R): a single cycle: no scatter of repeats to test the errors" in found
     assert not any("bias" in line for line in found)
+
+
+def test_frames_without_times_go_by_the_numbers_in_their_names(write: Callable[..., Path]) -> None:
+    keywords = {name: keyword for name, keyword in INSTRUMENT.keywords.items() if name != "time"}
+    instrument = dataclasses.replace(INSTRUMENT, keywords=keywords)
+    paths = [write(f"a{k}.fits", PLATE=FOUR[k % 4]) for k in (10, 9, 11, 8)]
+    frames = FrameSet.read(paths, instrument)
+    assert frames.column("name").tolist() == ["a8.fits", "a9.fits", "a10.fits", "a11.fits"]
+    assert frames.column("cycle").tolist() == [1] * 4
+
+
+def test_a_frame_set_crosses_process_boundaries(write: Callable[..., Path]) -> None:
+    frames = FrameSet.read(sequence(write), INSTRUMENT)
+    there = pickle.loads(pickle.dumps(frames.visits()[0]))
+    assert there.instrument == INSTRUMENT
+    assert there.column("eta").tolist() == frames.column("eta").tolist()
+
+
+def test_signs_of_a_wrong_site_or_unit(write: Callable[..., Path]) -> None:
+    paths = sequence(write, AIRMASS=1.0)
+    assert not any("check [site]" in line for line in doubts(FrameSet.read(paths, INSTRUMENT)))
+    east = dataclasses.replace(INSTRUMENT, site=Site(109.3, -29.3))
+    assert any("8 science frames point below the horizon" in line for line in doubts(FrameSet.read(paths, east)))
+    keywords = {**INSTRUMENT.keywords, "airmass": Keyword(("AIRMASS",))}
+    told = dataclasses.replace(INSTRUMENT, keywords=keywords)
+    assert any("the airmass in the headers is 0.6" in line for line in doubts(FrameSet.read(paths, told)))
+
+
+def test_angles_hidden_in_the_objects_name(write: Callable[..., Path]) -> None:
+    paths = [write(f"{k}.fits", k, PLATE=FOUR[k], OBJECT=f"Star hwp={FOUR[k]}") for k in range(4)]
+    assert any("give keywords.object a pattern" in line for line in doubts(FrameSet.read(paths, INSTRUMENT)))
+    keywords = {
+        **INSTRUMENT.keywords,
+        "object": Keyword(("OBJECT",), pattern="(.*) hwp="),
+        "wave_plate": Keyword(("OBJECT",), pattern="hwp=(.*)"),
+    }
+    frames = FrameSet.read(paths, dataclasses.replace(INSTRUMENT, keywords=keywords))
+    assert [len(visit) for visit in frames.visits()] == [4]
+    assert frames.column("psi").tolist() == list(FOUR)
 
 
 def test_incomplete_cycles_are_told(write: Callable[..., Path]) -> None:

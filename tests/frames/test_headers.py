@@ -11,6 +11,8 @@ from typing import Any
 import numpy as np
 import pytest
 from astropy.io import fits
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from hwpol.frames.headers import FileProblem, Frame, image_index, read_frame, read_headers
 from hwpol.instrument.description import Beam, Detector, Instrument, Keyword, WavePlate
@@ -174,6 +176,30 @@ def test_a_card_that_breaks_the_standard(tmp_path: Path) -> None:
     assert read_frame(path, instrument()).psi == 22.5
     path.write_bytes(raw.replace(card, b"PLATE   = NaN".ljust(80)))
     assert read_frame(path, instrument()).reasons == ["PLATE = 'NaN': expected an angle in degrees"]
+
+
+def test_a_degree_sign_in_a_header_does_no_harm(tmp_path: Path) -> None:
+    path = write(tmp_path / "a.fits", PLATE="22.5 deg")
+    raw = path.read_bytes()
+    for sign in (b"\xb0  ", b"\xc2\xb0 "):
+        path.write_bytes(raw.replace(b"22.5 deg", b"22.5 " + sign))
+        assert (read_frame(path, instrument()).reasons, read_frame(path, instrument()).psi) == ([], 22.5)
+
+
+@settings(deadline=None, max_examples=150, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(st.dictionaries(st.integers(0, 1400), st.integers(0, 255), max_size=12), st.integers(0, 2880 + 40))
+def test_no_damage_to_a_header_raises(tmp_path: Path, bytes_: dict[int, int], length: int) -> None:
+    path = tmp_path / "a.fits"
+    if not path.exists():
+        write(path, RA="12:00:00", DEC=-5.0, AIRMASS=1.1)
+    raw = bytearray(path.read_bytes()[: 2880 + 40])
+    for place, value in bytes_.items():
+        raw[place] = value
+    damaged = tmp_path / "b.fits"
+    damaged.write_bytes(raw[:length] if length % 2 else raw)
+    frame = read_frame(damaged, instrument(ra="RA", dec="DEC", airmass="AIRMASS"))
+    assert not frame.unread or len(frame.reasons) == 1
+    assert not length % 2 or frame.reasons
 
 
 def test_calibrations_need_no_plate_angle_and_bias_no_exposure(tmp_path: Path) -> None:
