@@ -1,0 +1,375 @@
+"""Finding the stars of one image, whatever its size, its stars' width and its blemishes."""
+
+from __future__ import annotations
+
+import warnings
+from dataclasses import dataclass, fields
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hwpol.flags import Flag
+from hwpol.pixels import PixelMask, Pixels
+from hwpol.registration.centroids import FWHM_PER_SIGMA, UNUSABLE, Bools, Floats, axes_of, binned, measure
+
+# A source whose minor axis is below this share of the field's width is not a star (hot pixel, hit, bad column).
+_SHARP = 0.6
+# No optics and pixel give less; what is narrower is one pixel.
+_ONE_PIXEL = 1.25
+_MOST_MEASURED = 3000
+
+
+@dataclass(frozen=True)
+class Stars:
+    """Stars of one image, brightest first; every array has shape (stars,).
+
+    Attributes
+    ----------
+    x, y : ndarray
+        Raw pixels, 0-based.
+    flux : ndarray
+        Electrons in the Gaussian of the field's width that fits best.
+    peak : ndarray
+        Brightest pixel above the sky, electrons.
+    fwhm, ellipticity : ndarray
+        Pixels; 1 - minor / major axis. NaN where not measured.
+    snr : ndarray
+        Of the windowed flux.
+    flags : ndarray of int
+        Bits of `Flag`: SATURATED, EDGE, BAD_PIXELS, NEIGHBOUR.
+    """
+
+    x: Floats
+    y: Floats
+    flux: Floats
+    peak: Floats
+    fwhm: Floats
+    ellipticity: Floats
+    snr: Floats
+    flags: NDArray[np.int64]
+
+    def __len__(self) -> int:
+        return len(self.x)
+
+    def select(self, index: NDArray[np.int64] | NDArray[np.bool_]) -> Stars:
+        """Return the stars that an index array or mask names."""
+        return Stars(*(getattr(self, f.name)[index] for f in fields(self)))
+
+    @property
+    def width(self) -> float:
+        """Median FWHM (pixels) of the stars that are neither saturated nor at an edge; NaN without any."""
+        clean = (self.flags & int(Flag.SATURATED | Flag.EDGE)) == 0
+        values = self.fwhm[clean if clean.any() else np.ones(len(self), bool)]
+        values = values[np.isfinite(values)][:200]
+        return float(np.median(values)) if len(values) else float("nan")
+
+
+def no_stars() -> Stars:
+    """An empty list."""
+    empty = np.zeros(0)
+    return Stars(empty, empty, empty, empty, empty, empty, empty, np.zeros(0, np.int64))
+
+
+def detect(pixels: Pixels, *, fwhm: float | None = None, threshold: float = 5.0) -> Stars:
+    """Find the stars of a calibrated image.
+
+    Sky: a clipped median mesh. Detection: peaks of the image smoothed with the stars' own Gaussian, in units of
+    the noise that the variance predicts there, scaled to the noise seen. Sources much sharper than the stars
+    (hot pixels, cosmic-ray hits, bad columns) are left out. Saturated stars are kept and flagged.
+
+    Parameters
+    ----------
+    pixels : Pixels
+        Calibrated box; masked pixels take no part (saturated ones do).
+    fwhm : float, optional
+        Width of the stars, pixels; estimated from the image when not given.
+    threshold : float
+        Least S/N.
+
+    Returns
+    -------
+    Stars
+        Brightest first, raw coordinates; empty where nothing is found.
+    """
+    bad = ((pixels.mask & UNUSABLE) != 0) | ~np.isfinite(pixels.data) | ~np.isfinite(pixels.variance)
+    if min(pixels.data.shape) < 3 or bad.all():
+        return no_stars()
+    flat = Pixels(
+        np.where(bad, 0.0, pixels.data - _background(pixels.data, bad)).astype(np.float32),
+        np.where(bad, 0.0, np.maximum(pixels.variance, 0.0)).astype(np.float32),
+        pixels.mask | np.where(bad, np.uint8(PixelMask.BAD), np.uint8(0)),
+    )
+    width = fwhm if fwhm is not None else _field_width(flat, bad)
+    if width is None:
+        return no_stars()
+    stars = _find(flat, bad, width, threshold)
+    shift = np.array([pixels.x0, pixels.y0], dtype=np.float64)
+    return Stars(stars.x + shift[0], stars.y + shift[1], *(getattr(stars, f.name) for f in fields(stars)[2:]))
+
+
+def _background(data: NDArray[np.float32], bad: Bools) -> Floats:
+    """Clipped median mesh of the sky, interpolated to every pixel.
+
+    The mesh is taken on averaged pixels: the sky needs no resolution and the time falls with their number.
+    """
+    from scipy import ndimage
+
+    n = int(np.clip(min(data.shape) // 128, 1, 8))
+    ny, nx = (length // n * n for length in data.shape)
+    good = ~bad[:ny, :nx].reshape(ny // n, n, nx // n, n)
+    count = good.sum(axis=(1, 3))
+    small = np.where(bad, 0.0, data)[:ny, :nx].reshape(ny // n, n, nx // n, n).sum(axis=(1, 3)) / np.maximum(count, 1)
+    mesh = _mesh(small, count == 0)
+    if n == 1:
+        return mesh
+    rows = (np.arange(data.shape[0]) + 0.5) / n - 0.5
+    columns = (np.arange(data.shape[1]) + 0.5) / n - 0.5
+    wide = ndimage.map_coordinates(
+        mesh, np.meshgrid(np.arange(mesh.shape[0]), columns, indexing="ij"), order=1, mode="nearest"
+    )
+    low = np.clip(np.floor(rows).astype(int), 0, max(mesh.shape[0] - 2, 0))
+    share = np.clip(rows - low, 0.0, 1.0)[:, None]
+    return wide[low] * (1 - share) + wide[np.minimum(low + 1, mesh.shape[0] - 1)] * share
+
+
+def _mesh(small: Floats, hidden: Bools) -> Floats:
+    from astropy.stats import SigmaClip
+    from photutils.background import Background2D, MedianBackground
+
+    box = max(24, 12 * min(small.shape) // 128)
+    seen = small[~hidden]
+    middle = float(np.median(seen))
+    spread = 1.4826 * float(np.median(np.abs(seen - middle)))
+    level = float(np.median(seen[np.abs(seen - middle) <= 3 * spread]))
+    if min(small.shape) < 3 * box:
+        return _plane(small, hidden, level)
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            found = Background2D(
+                small,
+                box_size=box,
+                mask=hidden,
+                filter_size=3,
+                exclude_percentile=80.0,
+                sigma_clip=SigmaClip(sigma=3.0, maxiters=5),
+                bkg_estimator=MedianBackground(),
+            )
+            return np.asarray(found.background, dtype=np.float64)
+    except ValueError:
+        # Every box of the mesh is masked for the most part: too little sky for a mesh.
+        return _plane(small, hidden, level)
+
+
+def _plane(small: Floats, hidden: Bools, level: float) -> Floats:
+    """Clipped plane; a constant where the image is tiny."""
+    y, x = np.indices(small.shape)
+    u, v = x / small.shape[1] - 0.5, y / small.shape[0] - 0.5
+    design = np.stack([np.ones(small.shape), u, v], axis=-1)
+    if min(small.shape) < 16:
+        return np.full(small.shape, level)
+    model = np.full(small.shape, level)
+    for _ in range(6):
+        residual = small - model
+        scatter = 1.4826 * np.median(np.abs(residual[~hidden]))
+        use = ~hidden & (np.abs(residual) <= 2.5 * scatter)
+        if use.sum() < 0.2 * (~hidden).sum() or use.sum() < 30:
+            return np.full(small.shape, level)
+        model = design @ np.linalg.lstsq(design[use], small[use], rcond=None)[0]
+    return np.asarray(model)
+
+
+def _significance(flat: Pixels, bad: Bools, fwhm: float) -> Floats:
+    """S/N of a star of this width centred on each pixel."""
+    from scipy.ndimage import gaussian_filter
+
+    sigma = fwhm / FWHM_PER_SIGMA
+    signal = gaussian_filter(flat.data, sigma, mode="constant", truncate=3.0)
+    noise = gaussian_filter(flat.variance, sigma / np.sqrt(2), mode="constant", truncate=3.0) / (4 * np.pi * sigma**2)
+    ratio = np.where(noise > 0, signal / np.sqrt(np.maximum(noise, 1e-30)), 0.0)
+    ratio[bad] = 0.0
+    seen = ratio[~bad]
+    seen = seen[:: max(1, len(seen) // 50_000)]
+    middle = np.median(seen)
+    scatter = 1.4826 * np.median(np.abs(seen - middle))
+    return (ratio - max(middle, 0.0)) / np.clip(scatter, 0.7, 3.0)
+
+
+def _peaks(ratio: Floats, fwhm: float, threshold: float) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Rows and columns of the local maxima above the threshold, highest first."""
+    from scipy.ndimage import maximum_filter
+
+    size = 2 * max(1, round(0.6 * fwhm)) + 1
+    rows, columns = np.nonzero((ratio > threshold) & (ratio == maximum_filter(ratio, size=size, mode="constant")))
+    order = np.argsort(-ratio[rows, columns], kind="stable")
+    return rows[order], columns[order]
+
+
+def _field_width(flat: Pixels, bad: Bools) -> float | None:
+    """Width of the stars (pixels): each source's best scale of 2.2, 4.4, ... pixels, refined by its moments."""
+    from scipy.spatial import cKDTree
+
+    found: list[tuple[float, float, float, float]] = []
+    level, n = flat, 1
+    while min(level.data.shape) >= 5 and n <= 16:
+        blind = (level.mask & UNUSABLE) != 0
+        ratio = _significance(level, blind, 2.2)
+        rows, columns = _peaks(ratio, 2.2, 6.0)
+        rows, columns = rows[:400], columns[:400]
+        found += [
+            (float(ratio[r, c]), (c + 0.5) * n - 0.5, (r + 0.5) * n - 0.5, 2.2 * n)
+            for r, c in zip(rows, columns, strict=True)
+        ]
+        n *= 2
+        level = binned(flat, n)
+    if not found:
+        return None
+    table = np.array(sorted(found, reverse=True))
+    tree = cKDTree(table[:, 1:3])
+    free = np.ones(len(table), bool)
+    chosen = []
+    for i in range(len(table)):
+        if free[i]:
+            chosen.append(i)
+            free[tree.query_ball_point(table[i, 1:3], 1.5 * table[i, 3] + 2)] = False
+    table = table[chosen]
+    widths, snr = [], []
+    saturated = _near_saturation(flat)
+    for scale in np.unique(table[:, 3]):
+        part = table[table[:, 3] == scale][:80]
+        place = measure(flat, part[:, 1], part[:, 2], scale)
+        major, minor = axes_of(flat, place.x, place.y, 1.3 * scale)
+        keep = place.ok & (minor > _ONE_PIXEL) & (minor > 0.5 * major)
+        rows, columns = (np.clip(np.rint(v).astype(int), 0, m - 1) for v, m in
+                         zip((place.y, place.x), flat.data.shape, strict=True))  # fmt: skip
+        full = saturated[rows, columns]
+        keep &= ~full | bool(full[keep].all())
+        widths.append(np.sqrt(major * minor)[keep])
+        snr.append(np.minimum(place.snr[keep], 300.0))
+    width, weight = np.concatenate(widths), np.concatenate(snr)
+    if not len(width):
+        return None
+    order = np.argsort(width)
+    middle = width[order][np.searchsorted(np.cumsum(weight[order]), 0.5 * weight.sum())]
+    near = np.abs(np.log(width / middle)) < 0.35
+    return float(np.clip(np.median(width[near]), 1.3, 0.5 * max(flat.data.shape)))
+
+
+def _near_saturation(flat: Pixels) -> Bools:
+    from scipy.ndimage import binary_dilation
+
+    full = (flat.mask & int(PixelMask.SATURATED)) != 0
+    return np.asarray(binary_dilation(full, iterations=2)) if full.any() else full
+
+
+def _find(flat: Pixels, bad: Bools, fwhm: float, threshold: float) -> Stars:
+    ratio = _significance(flat, bad, fwhm)
+    rows, columns = _peaks(ratio, fwhm, threshold)
+    full = _near_saturation(flat)
+    if full.any():
+        rows, columns = _one_per_plateau(full, rows, columns)
+    if not len(rows):
+        return no_stars()
+    place = measure(flat, columns, rows, fwhm, reach=max(1.5, 0.8 * fwhm))
+    x = np.where(place.ok, place.x, columns)
+    y = np.where(place.ok, place.y, rows)
+    saturated = full[rows, columns]
+    keep = (place.snr > threshold) & (place.flux > 0) & (place.ok | saturated | (place.snr > 2 * threshold))
+    keep &= saturated | ~_is_sharp(flat, bad, rows, columns, place.flux, fwhm)
+    index = np.flatnonzero(keep)
+    index = index[np.argsort(-place.flux[index], kind="stable")]
+    x, y, rows, columns, saturated = x[index], y[index], rows[index], columns[index], saturated[index]
+    flux, snr = place.flux[index], place.snr[index]
+    major, minor = np.full(len(x), np.nan), np.full(len(x), np.nan)
+    major[:_MOST_MEASURED], minor[:_MOST_MEASURED] = axes_of(flat, x[:_MOST_MEASURED], y[:_MOST_MEASURED], 1.3 * fwhm)
+    # Noise of a width is about 1 / snr of it; three of those keep faint stars in.
+    narrow = minor < np.maximum(_SHARP - 3.0 / np.maximum(snr, 1.0), 0.0) * fwhm
+    narrow |= (major < _ONE_PIXEL * 0.8) & (snr > 20)
+    # Bad columns and long tracks: no convergence, or thin.
+    narrow |= (snr > 15) & (~np.isfinite(minor) | ((minor < 0.45 * major) & (minor < 0.85 * fwhm)))
+    # Moments of an undersampled star follow its place within the pixel.
+    narrow &= fwhm >= 2.0
+    alone = _distinct(x, y, 0.5 * fwhm) & ~(narrow & ~saturated)
+    flags = _flags(flat, bad, x, y, fwhm, saturated)
+    peak = flat.data[rows, columns].astype(np.float64)
+    ellipticity = 1.0 - minor / major
+    stars = Stars(x, y, flux, peak, np.sqrt(major * minor), ellipticity, snr, flags)
+    return stars.select(alone)
+
+
+def _one_per_plateau(
+    full: Bools, rows: NDArray[np.int64], columns: NDArray[np.int64]
+) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Keep the first (highest) peak of each saturated patch: a bleeding star is one star."""
+    from scipy.ndimage import label
+
+    number = label(full)[0][rows, columns]
+    first = np.zeros(len(rows), bool)
+    first[np.unique(number, return_index=True)[1]] = True
+    keep = first | (number == 0)
+    return rows[keep], columns[keep]
+
+
+def _is_sharp(
+    flat: Pixels, bad: Bools, rows: NDArray[np.int64], columns: NDArray[np.int64], flux: Floats, fwhm: float
+) -> Bools:
+    """Whether the brightest pixel stands above its eight neighbours more than half-way to a lone pixel.
+
+    In units of the amplitude of the Gaussian that fits: 1 - <neighbours of a Gaussian> for a star, pi sigma^2 for
+    a lone pixel; the geometric mean divides them.
+    """
+    sigma = fwhm / FWHM_PER_SIGMA
+    ny, nx = flat.data.shape
+    # The lone pixel lies within a pixel or two of the smoothed peak.
+    reach = np.arange(-2, 3) if fwhm >= 2.5 else np.arange(-1, 2)
+    near_r = np.clip(rows[:, None, None] + reach[:, None], 0, ny - 1)
+    near_c = np.clip(columns[:, None, None] + reach, 0, nx - 1)
+    best = flat.data[near_r, near_c].reshape(len(rows), -1).argmax(axis=1)
+    r = np.clip(rows + reach[best // len(reach)], 0, ny - 1)
+    c = np.clip(columns + reach[best % len(reach)], 0, nx - 1)
+    offsets = [(i, j) for i in (-1, 0, 1) for j in (-1, 0, 1) if i or j]
+    around_r = np.stack([np.clip(r + i, 0, ny - 1) for i, _ in offsets])
+    around_c = np.stack([np.clip(c + j, 0, nx - 1) for _, j in offsets])
+    good = ~bad[around_r, around_c]
+    count = np.maximum(good.sum(axis=0), 1)
+    top = flat.data[r, c].astype(np.float64)
+    mean = (flat.data[around_r, around_c] * good).sum(axis=0) / count
+    amplitude = flux / (2 * np.pi * sigma**2)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        sharpness = (top - mean) / amplitude
+        noise = np.sqrt(flat.variance[r, c].astype(np.float64)) / amplitude
+    star = 1.0 - 0.5 * (np.exp(-0.5 / sigma**2) + np.exp(-1.0 / sigma**2))
+    lone = np.pi * sigma**2
+    # Below about 1.5 pixels the two meet and the pixel decides nothing.
+    limit = np.sqrt(star * lone) if lone > 1.15 * star else np.inf
+    return (good.sum(axis=0) >= 3) & (sharpness - limit > 2.0 * np.minimum(noise, sharpness / 3.0))
+
+
+def _distinct(x: Floats, y: Floats, separation: float) -> Bools:
+    """False for a source closer than `separation` to one that comes before it."""
+    from scipy.spatial import cKDTree
+
+    alone = np.ones(len(x), bool)
+    for _, j in sorted(cKDTree(np.column_stack([x, y])).query_pairs(separation)) if len(x) > 1 else ():
+        alone[j] = False
+    return alone
+
+
+def _flags(flat: Pixels, bad: Bools, x: Floats, y: Floats, fwhm: float, saturated: Bools) -> NDArray[np.int64]:
+    from scipy.spatial import cKDTree
+
+    ny, nx = flat.data.shape
+    flags = np.where(saturated, int(Flag.SATURATED), 0).astype(np.int64)
+    flags[(np.minimum(x, nx - 1 - x) < fwhm) | (np.minimum(y, ny - 1 - y) < fwhm)] |= int(Flag.EDGE)
+    half = int(np.ceil(fwhm))
+    offset = np.arange(-half, half + 1)
+    rows = np.clip(np.rint(y).astype(int)[:, None, None] + offset[:, None], 0, ny - 1)
+    columns = np.clip(np.rint(x).astype(int)[:, None, None] + offset, 0, nx - 1)
+    if bad.any():
+        outside = (flat.mask[rows, columns] & int(PixelMask.OUTSIDE)) != 0
+        flags[outside.any(axis=(1, 2))] |= int(Flag.EDGE)
+        flags[(bad[rows, columns] & ~outside).any(axis=(1, 2))] |= int(Flag.BAD_PIXELS)
+    if len(x) > 1:
+        for pair in cKDTree(np.column_stack([x, y])).query_pairs(2.5 * fwhm):
+            flags[list(pair)] |= int(Flag.NEIGHBOUR)
+    return flags
