@@ -66,6 +66,7 @@ def _chip(scenario: Scenario, layout: Layout, hdu: int) -> Chip:
     dead.flat[bad[::2]] = True
     hot.flat[bad[1::2]] = True
     dead[:, [column for column in array.bad_columns if column < nx]] = True
+    hot &= ~dead
     return Chip(
         gain=_gain(array, detector, beam),
         read_noise=_first(array.read_noise, beam.read_noise, detector.read_noise, 4.0),

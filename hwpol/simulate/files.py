@@ -51,7 +51,9 @@ def write_mask(path: Path, masks: list[NDArray[np.uint8]]) -> None:
 def hdus_of(extensions: tuple[int | str, ...], images: list[NDArray[np.uint16]], header: fits.Header) -> fits.HDUList:
     """Arrange arrays as the instrument file says: by number or by name, the header in the first HDU."""
     placed = dict(zip(extensions, images, strict=True))
-    hdus = fits.HDUList([fits.PrimaryHDU(placed.pop(0, None), header)])
+    primary = fits.PrimaryHDU(placed.pop(0, None))
+    primary.header.update(header)
+    hdus = fits.HDUList([primary])
     last = max((key for key in placed if isinstance(key, int)), default=0)
     hdus.extend(fits.ImageHDU(placed.pop(number, None)) for number in range(1, last + 1))
     hdus.extend(fits.ImageHDU(image, name=str(name)) for name, image in placed.items())

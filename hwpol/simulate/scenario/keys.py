@@ -59,9 +59,10 @@ class InstrumentContent:
 
     def read(self, value: Any, place: str, problems: Problems) -> Any:
         """Check the instrument; its problems are problems of the scenario."""
-        folder = problems.folder
+        folder, named = problems.folder, f"{place}."
         try:
             if isinstance(value, str):
+                named = f'{place} = "{value}": '
                 path = folder / value
                 value, folder = read_toml(path), path.absolute().parent
             if not isinstance(value, Mapping):
@@ -69,7 +70,7 @@ class InstrumentContent:
                 return BAD
             return instrument_from_dict(value, folder=folder), dict(value)
         except ConfigError as error:
-            problems.lines += [f"{place}.{line}" for line in error.problems]
+            problems.lines += [named + line for line in error.problems]
             return BAD
 
 
