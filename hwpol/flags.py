@@ -64,7 +64,7 @@ FLAG_TEXT: dict[Flag, str] = {
     Flag.NOISE_DOUBTFUL: "the noise model lacks a piece (bias, gain or read noise unknown)",
     Flag.FROM_MEMORY: "the calibration rests on catalogue values recalled from memory: check their source",
     Flag.FOREGROUND_DOMINATES: "the foreground removed is more than three times the error that remains",
-    Flag.CYCLE_VARIABLE: "q and u change from cycle to cycle",
+    Flag.CYCLE_VARIABLE: "q and u changed from the first half of the cycles to the second",
     Flag.NO_REPEATS: "a single cycle: the scatter of repeats could not test the errors",
 }
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from importlib import import_module
 from typing import Any
 
 import numpy as np
@@ -182,6 +183,10 @@ class Fluxes:
             target=target,
             frames=tuple(frames) or tuple(f"frame {k + 1}" for k in range(number)),
         )
+
+    def demodulated(self, calibration: Any = None) -> Any:
+        """Solve by least squares: what `hwpol.demodulate` does, for those who must not import it."""
+        return import_module("hwpol.demodulation").demodulate(self, calibration=calibration)
 
     def take_frames(self, index: Any) -> Fluxes:
         """Return only some frames (a mask or indices along the frame axis)."""

@@ -436,7 +436,7 @@ class Stokes:
             first,
             q=result.q,
             u=result.u,
-            covariance=adopt(result.covariance, result.scatter_covariance, result.chi2, result.dof),
+            covariance=adopt(result.covariance, result.scatter_covariance, result.chi2, result.dof)[0],
             i=None if any(s.i is None for s in items) else np.sum([s.i for s in items], axis=0),
             v=None,
             mjd=np.mean(times, axis=0) if times else None,

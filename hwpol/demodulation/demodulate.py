@@ -185,7 +185,7 @@ def _sky_model(fluxes: Fluxes, rows: Array, size: int, calibration: Any) -> Any:
     if calibration is None:
         return plain_model
     chi, eta, sense = fluxes.position_angle, fluxes.parallactic, fluxes.sense
-    ip, amplitude = calibration.terms(fluxes.filter, fluxes.x, fluxes.y, chi, eta, sense)
+    ip, amplitude = calibration.terms(fluxes.filter, fluxes.x, fluxes.y, chi, eta, sense, fluxes.mjd)
     unit = instrument_from_sky(np.ones(chi.shape), chi, sense)
 
     def sky_model(z: Array) -> tuple[Array, Array]:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from hwpol.frames.calibrator import Calibrator
 from hwpol.frames.frameset import FrameSet
 from hwpol.frames.grouping import Cycle
+from hwpol.frames.merging import merged
 
-__all__ = ["Cycle", "FrameSet"]
+__all__ = ["Calibrator", "Cycle", "FrameSet", "merged"]

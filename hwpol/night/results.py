@@ -1,0 +1,271 @@
+"""From measured visits and a calibration to the tables of a night."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from astropy.table import Table
+from numpy.typing import NDArray
+
+from hwpol.correction import Calibration
+from hwpol.flags import Flag, flag_names
+from hwpol.fluxes import Fluxes
+from hwpol.frames import FrameSet
+from hwpol.night.config_objects import NightConfig
+from hwpol.night.roles import Role
+from hwpol.night.rows import cycle_rows, result_rows
+from hwpol.night.solve import VisitSolution, solve_visit
+from hwpol.night.visit import VisitResult
+from hwpol.products import make_table
+from hwpol.stokes import Stokes, angle_difference, carry, real_slopes, sky_slopes
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Answer:
+    """What a night gave: its tables, the calibration, and what is to be said of it.
+
+    `visits` and `solutions` hold the measured and the solved visits in the order of the night.
+    """
+
+    results: Table
+    cycles: Table
+    frames: Table
+    standards: Table
+    calibration: Calibration | None
+    notes: tuple[str, ...]
+    visits: tuple[VisitResult, ...]
+    solutions: tuple[VisitSolution, ...]
+    seconds: float
+
+    @property
+    def clean(self) -> bool:
+        """Whether nothing was set aside and no check failed."""
+        aside = np.any(np.asarray(self.frames["status"]) != "used")
+        failed = np.any(
+            np.asarray(self.results["flags"]) & int(Flag.NULL_FAILED | Flag.PLATE_SUSPECT | Flag.UNDETERMINED)
+        )
+        return not (aside or failed)
+
+
+def assemble(
+    config: NightConfig,
+    frames: FrameSet,
+    visits: Sequence[VisitResult],
+    roles: dict[int, list[Role]],
+    calibration: Calibration | None,
+    failed: dict[int, str],
+    notes: Sequence[str],
+    seconds: float,
+) -> Answer:
+    """Solve every visit with the calibration and make the tables."""
+    words = [*notes]
+    rows: list[dict[str, Any]] = []
+    cycles: list[dict[str, Any]] = []
+    solutions = []
+    for visit in visits:
+        known = calibration is not None and visit.filter in calibration.filters
+        solution = _solve(config, visit, calibration if known else None)
+        solutions.append(solution)
+        if calibration is not None and not known:
+            words.append(
+                f"filter {visit.filter!r}: the calibration does not have it; q and u of visit {visit.task_number} stay "
+                "in the instrument frame"
+            )
+        own, each = _rows(config, visit, solution, roles[visit.task_number], calibration if known else None)
+        rows += own
+        cycles += each
+        words += [f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {note}" for note in visit.notes]
+    words += [f"visit {number} could not be measured: {reason}" for number, reason in sorted(failed.items())]
+    standards = _standards(visits, solutions, roles, calibration)
+    meta = {
+        "instrument": config.instrument.name,
+        "calibration": _calibration_name(config, calibration),
+        "estimator": config.statistics.estimator,
+        "level": config.statistics.level,
+        "angles": "north through east (ICRS), IAU 1973; q, u of frame 'instrument' from the instrument's +Q axis",
+    }
+    return Answer(
+        results=make_table(rows, "results", meta),
+        cycles=make_table(cycles, "cycles", meta),
+        frames=make_table(
+            _frame_rows(config, frames, visits, failed), "frames", {"instrument": config.instrument.name}
+        ),
+        standards=make_table(standards, "standards", meta),
+        calibration=calibration,
+        notes=tuple(dict.fromkeys(words)),
+        visits=tuple(visits),
+        solutions=tuple(solutions),
+        seconds=seconds,
+    )
+
+
+def _calibration_name(config: NightConfig, calibration: Calibration | None) -> str:
+    if calibration is None:
+        return "none"
+    return config.correction.calibration.name if isinstance(config.correction.calibration, Path) else "fit"
+
+
+def _solve(config: NightConfig, visit: VisitResult, calibration: Calibration | None) -> VisitSolution:
+    options = config.demodulation
+    solution = solve_visit(
+        visit.fluxes,
+        method=options.method,
+        gain="fixed" if options.gain == "night" else options.gain,
+        circular=options.circular,
+        calibration=calibration,
+    )
+    return with_drift(solution, visit.drift, calibration)
+
+
+def with_drift(solution: VisitSolution, drift: Array, calibration: Calibration | None) -> VisitSolution:
+    """Add what q and u drift over the plateau of radii to the error of the visit's first target."""
+    if not np.any(drift > 0):
+        return solution
+    extra = np.diag(np.asarray(drift) ** 2)
+    stokes = solution.stokes
+    if calibration is not None:
+        model = calibration.model(stokes.filter)
+        slopes = real_slopes(*sky_slopes(stokes.position_angle, stokes.sense))
+        extra = carry(extra, slopes.reshape(-1, 2, 2)[0]) / model.efficiency**2
+    covariance = stokes.covariance.copy()
+    covariance[0, :2, :2] += extra
+    return replace(solution, stokes=replace(stokes, covariance=covariance))
+
+
+def _rows(
+    config: NightConfig,
+    visit: VisitResult,
+    solution: VisitSolution,
+    roles: Sequence[Role],
+    calibration: Calibration | None,
+) -> tuple[list[dict[str, Any]], list[dict[str, Any]]]:
+    fluxes = visit.fluxes
+    sources, targets = fluxes.shape[0], len(visit.names)
+    added = visit.flags.copy()
+    if calibration is None:
+        added |= int(Flag.UNCALIBRATED)
+    chi, eta = solution.stokes.position_angle, solution.stokes.parallactic
+    common = {
+        "filter": visit.filter,
+        "visit": visit.task_number,
+        "chi": float(chi),
+        "eta": np.nan if eta is None else float(eta),
+        "radius": visit.radius,
+        "fwhm": float(np.nanmedian(visit.fwhm)) if np.isfinite(visit.fwhm).any() else np.nan,
+    }
+    options = {"estimator": config.statistics.estimator, "level": config.statistics.level}
+    rows = result_rows(
+        solution,
+        fluxes,
+        common,
+        {"ra": visit.ra, "dec": visit.dec, "flags": added},
+        calibration=_calibration_name(config, calibration),
+        photon_err=_photon_error(solution, calibration),
+        **options,  # type: ignore[arg-type]
+    )
+    for s, row in enumerate(rows):
+        row["target"] = visit.names[s] if s < targets else visit.names[0]
+        row["source"] = 0 if s < targets else s - targets + 1
+        row["role"] = roles[s].role if s < targets else "science"
+    assert len(rows) == sources
+    return rows, cycle_rows(solution, fluxes, rows, **options)  # type: ignore[arg-type]
+
+
+def _photon_error(solution: VisitSolution, calibration: Calibration | None) -> Array:
+    """Error of q, in the frame of the result, that source photons alone would allow."""
+    observed = replace(solution.observed, covariance=solution.photon_covariance, v=None)
+    if calibration is not None:
+        observed = calibration.apply(observed)
+    return np.asarray(observed.q_err)
+
+
+def _standards(
+    visits: Sequence[VisitResult],
+    solutions: Sequence[VisitSolution],
+    roles: dict[int, list[Role]],
+    calibration: Calibration | None,
+) -> list[dict[str, Any]]:
+    """Rows of standards.ecsv: those of the fit, and the standards that took no part in one."""
+    rows = [] if calibration is None else calibration.standards_table()
+    told = {(row["name"], row["filter"], row["visit"]) for row in rows}
+    for visit, solution in zip(visits, solutions, strict=True):
+        for s, name in enumerate(visit.names):
+            role = roles[visit.task_number][s]
+            if role.entry is not None and (name, visit.filter, visit.task_number) not in told:
+                rows.append(_standard_row(name, visit, solution.stokes[s : s + 1], role))
+    return rows
+
+
+def _standard_row(name: str, visit: VisitResult, stokes: Stokes, role: Role) -> dict[str, Any]:
+    entry = role.entry
+    assert entry is not None
+    cat = 0j if role.role == "zero-polarised" else entry.p * np.exp(2j * np.radians(entry.theta))
+    on_sky = stokes.frame == "sky"
+    dz = stokes.z[0] - cat if on_sky else complex(np.nan, np.nan)
+    row = {
+        "name": name, "filter": visit.filter, "visit": visit.task_number, "role": role.role,
+        "cat_p": entry.p, "cat_p_err": entry.p_err, "cat_theta": entry.theta, "cat_theta_err": entry.theta_err,
+        "cat_q": cat.real, "cat_u": cat.imag, "provenance": entry.provenance, "reference": entry.reference,
+        "used": False,
+    }  # fmt: skip
+    if not on_sky:
+        return row
+    spread = (entry.p**2 + entry.p_err**2) / 2 if role.role == "zero-polarised" else entry.p_err**2
+    across = spread if role.role == "zero-polarised" else (2 * entry.p * np.radians(entry.theta_err)) ** 2
+    turn = np.exp(2j * np.radians(entry.theta)) if role.role == "polarised" else 1.0 + 0j
+    axes = np.array([[turn.real, -turn.imag], [turn.imag, turn.real]])
+    total = stokes.total_covariance[0] + axes @ np.diag([spread, across]) @ axes.T
+    vector = np.array([dz.real, dz.imag])
+    row |= {
+        "q": stokes.q[0], "u": stokes.u[0], "q_err": stokes.q_err[0], "u_err": stokes.u_err[0],
+        "p": stokes.p[0], "p_err": stokes.p_err[0], "theta": stokes.theta[0], "theta_err": stokes.theta_err[0],
+        "dq": dz.real, "du": dz.imag, "dp": stokes.p[0] - abs(cat),
+        "dtheta": float(angle_difference(stokes.theta[0], entry.theta)) if role.role == "polarised" else np.nan,
+        "sigma": float(np.sqrt(vector @ np.linalg.solve(total, vector))) if np.isfinite(total).all() else np.nan,
+    }  # fmt: skip
+    return row
+
+
+def _frame_rows(
+    config: NightConfig, frames: FrameSet, visits: Sequence[VisitResult], failed: dict[int, str]
+) -> list[dict[str, Any]]:
+    lost = _lost_frames(visits)
+    rows = []
+    for row in frames.table:
+        status, reason = str(row["status"]), str(row["reason"])
+        if status == "used" and int(row["visit"]) in failed:
+            status, reason = "set aside", failed[int(row["visit"])]
+        elif status == "used" and (int(row["visit"]), str(row["name"])) in lost:
+            status, reason = "set aside", lost[int(row["visit"]), str(row["name"])]
+        rows.append(
+            {name: row[name] for name in ("kind", "object", "filter", "exposure", "mjd", "wave_plate", "psi")}
+            | {"visit": row["visit"], "cycle": row["cycle"], "status": status, "reason": reason}
+            | {"file": _relative(str(row["file"]), config.folder)}
+        )
+    return rows
+
+
+def _lost_frames(visits: Sequence[VisitResult]) -> dict[tuple[int, str], str]:
+    """Frames of which no source could be used, with the reason."""
+    lost = {}
+    for visit in visits:
+        fluxes: Fluxes = visit.fluxes
+        dead = ~np.isfinite(fluxes.flux).any(axis=(0, 2))
+        for k in np.flatnonzero(dead):
+            bits = int(np.bitwise_or.reduce(fluxes.flags[:, k], axis=(0, 1)))
+            why = ", ".join(name.replace("_", " ") for name in flag_names(bits)) or "not measured"
+            lost[visit.task_number, fluxes.frames[k]] = f"no source of its visit could be measured in it: {why}"
+    return lost
+
+
+def _relative(file: str, folder: Path) -> str:
+    try:
+        return Path(file).resolve().relative_to(folder.resolve()).as_posix()
+    except ValueError:
+        return file

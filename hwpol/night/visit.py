@@ -1,0 +1,380 @@
+"""One visit, from raw frames to fluxes: a pure function that any executor can run."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hwpol.errors import InputError
+from hwpol.flags import Flag
+from hwpol.fluxes import Fluxes
+from hwpol.frames import Calibrator, FrameSet
+from hwpol.frames.world import World, read_world
+from hwpol.instrument.description import Section
+from hwpol.night.config_objects import PhotometryConfig, TargetConfig
+from hwpol.night.images import VisitImages
+from hwpol.night.radius import LADDER, RadiusChoice, choose_radius
+from hwpol.photometry.measure import Measurement, Stars, measure
+from hwpol.pixels import Box
+from hwpol.registration import Placement, register
+
+Array = NDArray[np.float64]
+
+#: Pixels within which a star is taken for the target at a given place.
+NEAR_XY = 12.0
+#: Seconds of arc within which a star is taken for the target at a place from world coordinates.
+NEAR_SKY = 12.0
+#: Full width taken where no star tells it, pixels.
+UNKNOWN_FWHM = 4.0
+
+
+@dataclass(frozen=True)
+class VisitTask:
+    """All that `reduce_visit` needs; pickles."""
+
+    number: int
+    frames: FrameSet
+    calibrator: Calibrator
+    targets: tuple[TargetConfig, ...]
+    photometry: PhotometryConfig
+    registration: str = "stars"
+    hits: bool = True
+    method: str = "least-squares"
+    gain: str = "visit"
+
+
+@dataclass(frozen=True)
+class VisitResult:
+    """What came out of one visit.
+
+    Attributes
+    ----------
+    names : tuple of str
+        Name of each target; source s < len(names) is that target, the rest are field stars by brightness.
+    fluxes : Fluxes
+    radius : float
+        Pixels.
+    fwhm, ellipticity : ndarray, shape (K, B)
+    shift : ndarray, shape (K, 2)
+    ra, dec : ndarray, shape (S,)
+    flags : ndarray of int, shape (S,)
+        To add to what the solve finds.
+    drift : ndarray, shape (2,)
+        Spread of q, u over the plateau (instrument frame).
+    choice : RadiusChoice or None
+    radii : ndarray, shape (R,)
+        Radii of the curve, pixels.
+    growth : ndarray, shape (R,)
+        Light of the first target inside each radius relative to the largest.
+    stamps : ndarray, shape (B, n, n)
+        Picture of the first target in every beam of the first frame, electrons.
+    stamp_corner : ndarray, shape (B, 2)
+    notes : tuple of str
+    """
+
+    task_number: int
+    names: tuple[str, ...]
+    filter: str
+    fluxes: Fluxes
+    radius: float
+    annulus: tuple[float, float]
+    fwhm: Array
+    ellipticity: Array
+    shift: Array
+    ra: Array
+    dec: Array
+    flags: NDArray[np.int_]
+    drift: Array
+    choice: RadiusChoice | None
+    radii: Array
+    growth: Array
+    stamps: Array
+    stamp_corner: Array
+    notes: tuple[str, ...] = ()
+
+
+def reduce_visit(task: VisitTask) -> VisitResult:
+    """Register and measure one visit.
+
+    Raises
+    ------
+    InputError
+        When no frame of the visit can be measured.
+    """
+    images = VisitImages(task.frames, task.calibrator)
+    instrument = task.frames.instrument
+    world = read_world(task.frames.table["file"][0], instrument.extension_of(0))
+    hints = [_hint(target, task.frames, world) for target in task.targets]
+    placement = place(task, images, hints)
+    fwhm = float(np.nanmedian(placement.fwhm)) if np.isfinite(placement.fwhm).any() else UNKNOWN_FWHM
+    notes = list(placement.notes)
+
+    x, y, flags = _targets(task, placement, hints, instrument.detector.pixel_scale, notes)
+    px, py = placement.positions(x, y)
+    stars = _known_stars(placement, fwhm)
+    sections = [_section(task.frames, b) for b in range(len(instrument.beams))]
+    ring = tuple(extent.pixels(fwhm) for extent in task.photometry.annulus)
+    best = task.photometry.radius.unit == "best"
+    multiples = LADDER if best else np.unique(np.append(LADDER, task.photometry.radius.pixels(fwhm) / fwhm))
+    radii = multiples * fwhm
+    options: dict[str, Any] = {
+        "annulus": ring,
+        "hdu_of_beam": images.hdu_of_beam,
+        "sections": sections,
+        "stars": stars,
+        "hits": task.hits,
+    }
+    measured = measure(images, px, py, radii=radii, **options)
+    choice = choose_radius(
+        [_fluxes(task, measured, r, x[:1], y[:1], slice(0, 1)) for r in range(len(radii))],
+        multiples,
+        method=task.method,
+        gain=task.gain,
+    )
+    index = choice.index if best else int(np.argmin(np.abs(radii - task.photometry.radius.pixels(fwhm))))
+    if best and not choice.plateau:
+        flags[0] |= int(Flag.NO_PLATEAU)
+    drift = choice.drift if best else np.zeros(2)
+    fluxes = _fluxes(task, measured, index, x, y, slice(None))
+
+    if task.photometry.sources == "field":
+        more_x, more_y = _field(placement, x, y, fwhm)
+        if len(more_x):
+            fx, fy = placement.positions(more_x, more_y)
+            field = measure(images, fx, fy, radii=radii[index : index + 1], **options)
+            fluxes = _join(fluxes, _fluxes(task, field, 0, more_x, more_y, slice(None)))
+            flags = np.append(flags, np.zeros(len(more_x), dtype=int))
+    if task.calibrator.noise_doubtful:
+        flags |= int(Flag.NOISE_DOUBTFUL)
+    ra, dec = _coordinates(task, world, fluxes)
+    brightest = np.nanmedian(measured.flux[:, 0], axis=(1, 2)) if np.isfinite(measured.flux[:, 0]).any() else None
+    growth = np.full(len(radii), np.nan) if brightest is None else brightest / brightest[-1]
+    stamps, corner = _stamps(images, px[0, 0], py[0, 0], ring[1])
+    return VisitResult(
+        task_number=task.number,
+        names=tuple(target.name for target in task.targets),
+        filter=str(task.frames.table["filter"][0]),
+        fluxes=fluxes,
+        radius=float(radii[index]),
+        annulus=(float(ring[0]), float(ring[1])),
+        fwhm=placement.fwhm,
+        ellipticity=placement.ellipticity,
+        shift=placement.shift,
+        ra=ra,
+        dec=dec,
+        flags=flags,
+        drift=drift,
+        choice=choice,
+        radii=radii,
+        growth=growth,
+        stamps=stamps,
+        stamp_corner=corner,
+        notes=tuple(notes),
+    )
+
+
+def place(task: VisitTask, images: VisitImages, hints: list[tuple[float, float] | None]) -> Placement:
+    """Register the frames of a visit."""
+    instrument = task.frames.instrument
+    moving = any(target.moving for target in task.targets)
+    plate, mjd = task.frames.column("psi"), task.frames.column("mjd")
+    strips = [_section(task.frames, b) for b in range(len(instrument.beams))]
+    return register(
+        images,
+        len(task.frames),
+        len(instrument.beams),
+        nominal_offsets=[beam.offset for beam in instrument.beams],
+        hdu_of_beam=images.hdu_of_beam,
+        sections=[None if s is None else Box(s.x0, s.y0, s.x1, s.y1) for s in strips],
+        method=task.registration,
+        header_shifts=_header_shifts(task) if task.registration == "header" else None,
+        target=hints[0],
+        moving=moving,
+        psi=plate if np.isfinite(plate).all() else None,
+        times=(mjd - mjd[0]) * 1440.0 if np.isfinite(mjd).all() else None,
+    )
+
+
+def _header_shifts(task: VisitTask) -> Array:
+    """Shifts (K, 2) in pixels of the pointing between frames, from world coordinates."""
+    files = task.frames.table["file"]
+    extension = task.frames.instrument.extension_of(0)
+    first = read_world(files[0], extension)
+    if first is None:
+        raise InputError(
+            'registration.method = "header": the frames hold no world coordinates; use "stars", "correlation" or "off"'
+        )
+    ra, dec = first.sky(*first.wcs.wcs.crpix - 1)
+    shifts = []
+    for file in files:
+        world = read_world(file, extension)
+        shifts.append([np.nan, np.nan] if world is None else np.ravel(world.pixel(ra, dec)) - (first.wcs.wcs.crpix - 1))
+    return np.asarray(shifts)
+
+
+def _hint(target: TargetConfig, frames: FrameSet, world: World | None) -> tuple[float, float] | None:
+    if target.xy is not None:
+        return float(target.xy[0]), float(target.xy[1])
+    if world is None:
+        return None
+    ra = target.ra if target.ra is not None else float(frames.table["ra"][0])
+    dec = target.dec if target.dec is not None else float(frames.table["dec"][0])
+    if not np.isfinite([ra, dec]).all():
+        return None
+    x, y = world.pixel(ra, dec)
+    if not np.isfinite([x[0], y[0]]).all():
+        return None
+    text = str(frames.table["shape"][0])
+    sides = [float(part) for part in text.replace("x", " ").split() if part.strip().isdigit()]
+    inside = len(sides) < 2 or (-0.5 < x[0] < sides[0] and -0.5 < y[0] < sides[1])
+    return (float(x[0]), float(y[0])) if inside else None
+
+
+def _targets(
+    task: VisitTask,
+    placement: Placement,
+    hints: list[tuple[float, float] | None],
+    pixel_scale: float | None,
+    notes: list[str],
+) -> tuple[Array, Array, NDArray[np.int_]]:
+    """Pixels of the targets in the first beam and frame, and the flags of how they were found."""
+    stars = placement.stars
+    x, y, flags = [], [], []
+    for target, hint in zip(task.targets, hints, strict=True):
+        flag = 0
+        place_ = hint
+        if hint is not None and len(stars):
+            near = NEAR_XY if target.xy is not None or not pixel_scale else max(NEAR_XY, NEAR_SKY / pixel_scale)
+            distance = np.hypot(stars.x - hint[0], stars.y - hint[1])
+            nearest = int(np.argmin(distance))
+            if distance[nearest] <= near:
+                place_ = float(stars.x[nearest]), float(stars.y[nearest])
+            elif target.xy is None:
+                place_ = None
+                notes.append(
+                    f"{target.name}: no star within {near:.0f} pixels of its coordinates; "
+                    "taken for the brightest source that has its partner in every beam"
+                )
+            else:
+                flag |= int(Flag.NOT_FOUND)
+        if place_ is None:
+            if not len(stars):
+                raise InputError(
+                    f"{target.name}: no star was found in the first frame of its visit and its place is not known; "
+                    "give [[target]] xy = [x, y]"
+                )
+            flag |= int(Flag.POSITION_GUESSED)
+            brightest = int(np.argmax(stars.flux))
+            place_ = float(stars.x[brightest]), float(stars.y[brightest])
+            if hint is None:
+                notes.append(
+                    f"{target.name}: place guessed from the brightest source that has its partner in every beam"
+                )
+        x.append(place_[0])
+        y.append(place_[1])
+        flags.append(flag)
+    return np.asarray(x), np.asarray(y), np.asarray(flags, dtype=int)
+
+
+def _known_stars(placement: Placement, fwhm: float) -> Stars | None:
+    stars = placement.stars
+    if not len(stars):
+        return None
+    x, y = placement.positions(stars.x, stars.y)
+    # A star ten times brighter is felt half a width further out (wings of a Moffat profile against the noise).
+    reach = 1.5 + 0.5 * np.log10(np.maximum(np.nan_to_num(stars.snr, nan=10.0) / 10.0, 1.0))
+    return Stars(x, y, np.minimum(reach, 3.5) * fwhm)
+
+
+def _field(placement: Placement, x: Array, y: Array, fwhm: float) -> tuple[Array, Array]:
+    """First-beam positions of the field's stars, brightest first, without the targets."""
+    stars = placement.stars
+    distance = np.hypot(stars.x[:, None] - x, stars.y[:, None] - y).min(axis=1, initial=np.inf)
+    chosen = np.flatnonzero(distance > max(2.0, 0.5 * fwhm))
+    order = chosen[np.argsort(-stars.flux[chosen], kind="stable")]
+    return stars.x[order], stars.y[order]
+
+
+def _section(frames: FrameSet, beam: int) -> Section | None:
+    instrument = frames.instrument
+    return instrument.beams[beam].section or instrument.beams[beam].trim or instrument.detector.trim
+
+
+def _fluxes(task: VisitTask, measured: Measurement, radius: int, x: Array, y: Array, part: slice) -> Fluxes:
+    frames, instrument = task.frames, task.frames.instrument
+    column = frames.column
+    filter_name = str(frames.table["filter"][0])
+    plate = instrument.wave_plate
+    # A tiny floor: a variance of zero would be refused, and no detector has one.
+    variance = np.maximum(measured.variance[radius][part], 1e-6)
+    return Fluxes.from_arrays(
+        measured.flux[radius][part],
+        np.where(np.isfinite(measured.flux[radius][part]), variance, np.nan),
+        wave_plate=None if plate is None else column("psi"),
+        analyser=[beam.analyser for beam in instrument.beams],
+        retardance=180.0 if plate is None else plate.retardance_of(filter_name),
+        cycle=column("cycle"),
+        position_angle=column("chi"),
+        parallactic=column("eta"),
+        sense=instrument.orientation.sense,
+        filter=filter_name,
+        x=x,
+        y=y,
+        mjd=column("mjd"),
+        exposure=column("exposure"),
+        airmass=column("airmass"),
+        throughput=[beam.throughput for beam in instrument.beams],
+        throughput_err=[np.nan if b.throughput_err is None else b.throughput_err for b in instrument.beams],
+        sky=measured.sky[part],
+        flags=measured.flags[radius][part],
+        target=task.targets[0].name,
+        frames=tuple(str(name) for name in frames.table["name"]),
+    )
+
+
+def _join(first: Fluxes, second: Fluxes) -> Fluxes:
+    return replace(
+        first,
+        **{
+            name: np.concatenate([getattr(first, name), getattr(second, name)])
+            for name in ("flux", "variance", "flags", "sky", "x", "y")
+        },
+    )
+
+
+def _coordinates(task: VisitTask, world: World | None, fluxes: Fluxes) -> tuple[Array, Array]:
+    if world is not None:
+        ra, dec = world.sky(fluxes.x, fluxes.y)
+    else:
+        ra, dec = np.full(fluxes.shape[0], np.nan), np.full(fluxes.shape[0], np.nan)
+    for s, target in enumerate(task.targets):
+        if target.ra is not None and target.dec is not None:
+            ra[s], dec[s] = target.ra, target.dec
+        elif not np.isfinite(ra[s]) or s == 0:
+            header = float(task.frames.table["ra"][0]), float(task.frames.table["dec"][0])
+            if np.isfinite(header).all():
+                ra[s], dec[s] = header
+    return ra, dec
+
+
+def _stamps(images: VisitImages, x: Array, y: Array, reach: float) -> tuple[Array, Array]:
+    half = int(np.ceil(reach)) + 2
+    pictures, corners = [], []
+    for b in range(len(x)):
+        picture = np.full((2 * half + 1, 2 * half + 1), np.nan, dtype=np.float32)
+        corner = (0, 0)
+        if np.isfinite([x[b], y[b]]).all():
+            cx, cy = round(float(x[b])), round(float(y[b]))
+            corner = (cx - half, cy - half)
+            box = Box(max(cx - half, 0), max(cy - half, 0), max(cx + half + 1, 0), max(cy + half + 1, 0))
+            if box.x1 > box.x0 and box.y1 > box.y0:
+                pixels = images(0, b, box)
+                rows, columns = pixels.data.shape
+                top, left = pixels.y0 - corner[1], pixels.x0 - corner[0]
+                picture[top : top + rows, left : left + columns] = pixels.data
+        pictures.append(picture)
+        corners.append(corner)
+    return np.asarray(pictures), np.asarray(corners)
