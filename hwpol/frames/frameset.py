@@ -66,7 +66,7 @@ class FrameSet:
         - ra, dec : ICRS, deg
         - gain : electron/adu from the header
         - visit, cycle, position : from 1; -1 for none; `position` numbers a visit's plate positions by angle
-        - shape : sides of the image, x first
+        - shape : sides of the image, x first ("512 x 500"), of one HDU after the other where beams have their own
         - status, reason : used, "set aside" or unread, and why
         - note : a doubt that does not stop the frame from being used
 

@@ -36,16 +36,7 @@ class FileProblem(Exception):
 
 @dataclass(frozen=True)
 class FileHeaders:
-    """The headers of all HDUs of one file, in file order.
-
-    Attributes
-    ----------
-    headers : tuple of Header
-    digest : bytes
-        Of all header bytes: equal for copies.
-    damage : str
-        Why the file is not whole; empty when it is.
-    """
+    """The headers of a file's HDUs; `digest` is equal for copies, `damage` says why a file is not whole (or "")."""
 
     headers: tuple[fits.Header, ...]
     digest: bytes
@@ -165,22 +156,28 @@ def _sides(header: fits.Header, stem: str) -> tuple[int, ...]:
 
 
 def image_sides(header: fits.Header) -> tuple[int, ...]:
-    """Lengths (x first) of the image an HDU holds, compressed or not; empty where it holds none."""
+    """Lengths (x first) of the image an HDU holds, compressed or not; empty where it holds none.
+
+    Axes of length 1 behind the second do not count.
+    """
     try:
         if header.get("ZIMAGE", False):
-            return _sides(header, "ZNAXIS")
-        if str(header.get("XTENSION", "IMAGE")).strip() != "IMAGE":
+            sides = _sides(header, "ZNAXIS")
+        elif str(header.get("XTENSION", "IMAGE")).strip() == "IMAGE":
+            sides = _sides(header, "NAXIS")
+        else:
             return ()
-        return _sides(header, "NAXIS")
     except (KeyError, ValueError, TypeError, fits.VerifyError):
         return ()
+    while len(sides) > 2 and sides[-1] == 1:
+        sides = sides[:-1]
+    return sides
 
 
 def image_index(headers: tuple[fits.Header, ...], extension: int | str) -> int | None:
     """Index of the HDU that holds the image an instrument file calls `extension`; None where there is none.
 
-    Compression moves the primary image (``ZSIMPLE``) and all behind it one HDU on; `extension` keeps the
-    numbers of the uncompressed file. An image that stands alone in a file is also taken for extension 0.
+    Compression moves a primary image to the first extension; 0 still means that image.
     """
     if isinstance(extension, str):
         wanted = extension.strip().casefold()
@@ -188,12 +185,9 @@ def image_index(headers: tuple[fits.Header, ...], extension: int | str) -> int |
             if str(header.get("EXTNAME", "")).strip().casefold() == wanted and image_sides(header):
                 return index
         return None
-    if len(headers) > 1 and "ZSIMPLE" in headers[1] and not image_sides(headers[0]):
-        extension += 1
-    if extension < len(headers) and image_sides(headers[extension]):
-        return extension
-    images = [index for index, header in enumerate(headers) if image_sides(header)]
-    return images[0] if extension == 0 and len(images) == 1 else None
+    if extension == 0 and len(headers) > 1 and not image_sides(headers[0]) and headers[1].get("ZIMAGE", False):
+        extension = 1
+    return extension if extension < len(headers) and image_sides(headers[extension]) else None
 
 
 @dataclass
@@ -264,8 +258,14 @@ def _find_images(frame: Frame, found: FileHeaders, instrument: Instrument) -> in
         index = image_index(found.headers, extension)
         if index is None:
             if not found.damage:
-                frame.reasons.append(f"no image in HDU {extension}")
+                others = [str(at) for at, header in enumerate(found.headers) if image_sides(header)]
+                there = f" (but in HDU {', '.join(others)}: set extension)" if others else ""
+                frame.reasons.append(f"no image in HDU {extension}{there}")
             continue
+        if index in hdus:
+            frame.reasons.append(
+                f"HDU {extension} is that of another beam: compression changed the numbers of the HDUs"
+            )
         sides = image_sides(found.headers[index])
         shapes.append(" x ".join(map(str, sides)))
         hdus.append(index)
@@ -273,7 +273,7 @@ def _find_images(frame: Frame, found: FileHeaders, instrument: Instrument) -> in
             frame.reasons.append(f"the image has {len(sides)} axes ({shapes[-1]}), expected 2")
         elif min(sides) < 1:
             frame.reasons.append(f"the image has no pixels ({shapes[-1]})")
-    frame.shape, frame.hdus = ", ".join(dict.fromkeys(shapes)), tuple(hdus)
+    frame.shape, frame.hdus = " and ".join(dict.fromkeys(shapes)), tuple(hdus)
     return hdus[0] if hdus else 0
 
 

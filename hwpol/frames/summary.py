@@ -10,6 +10,7 @@ from datetime import UTC, datetime, timedelta
 import numpy as np
 from numpy.typing import NDArray
 
+from hwpol.frames.calibrator import Calibrator
 from hwpol.frames.frameset import FrameSet
 from hwpol.frames.geometry import airmass_of, time_warning
 from hwpol.frames.grouping import position_angle
@@ -23,12 +24,14 @@ _OTHER_AIRMASS = 0.05
 _MJD_ZERO = datetime(1858, 11, 17, tzinfo=UTC)
 
 
-def describe(frames: FrameSet) -> str:
+def describe(frames: FrameSet, *, flat: str = "pooled") -> str:
     """Describe visits, calibrations and what is missing or doubtful with its consequence; lines of up to 100 columns.
 
     Parameters
     ----------
     frames : FrameSet
+    flat : {"pooled", "per-angle", "off"}
+        How flats will be used.
 
     Returns
     -------
@@ -36,20 +39,27 @@ def describe(frames: FrameSet) -> str:
     """
     lines = [_counts(frames), ""]
     lines += [*_visit_lines(frames), "", "Calibrations", *_calibration_lines(frames)]
-    problems = doubts(frames)
+    problems = doubts(frames, flat=flat)
     lines += ["", "Missing or doubtful" if problems else "Nothing missing or doubtful."]
     for problem in problems:
         lines += _wrapped(problem, "  - ", "    ")
     return "\n".join(lines)
 
 
-def doubts(frames: FrameSet) -> list[str]:
-    """List what is missing or doubtful in a set of frames and in its instrument, each with its consequence."""
+def doubts(frames: FrameSet, *, flat: str = "pooled") -> list[str]:
+    """List what is missing or doubtful in a set of frames and in its instrument, each with its consequence.
+
+    Parameters
+    ----------
+    frames : FrameSet
+    flat : {"pooled", "per-angle", "off"}
+        How flats will be used.
+    """
     found = _file_doubts(frames)
     science = frames.science()
     if len(science) == 0:
         return [*found, "no science frame in use: there is nothing to reduce"]
-    found += _calibration_doubts(frames, science)
+    found += _calibration_doubts(frames, flat)
     visits = frames.visits()
     alone = sum(len(_angles(visit)) == 1 for visit in visits)
     if alone > 3 and alone > len(visits) / 2:
@@ -211,42 +221,16 @@ def _file_doubts(frames: FrameSet) -> list[str]:
     return found
 
 
-def _calibration_doubts(frames: FrameSet, science: FrameSet) -> list[str]:
-    detector, found = frames.instrument.detector, []
-    set_ = frames.calibrations()
-    kind, filters = set_.column("kind"), set_.column("filter")
-    overscan = detector.overscan is not None or all(beam.overscan for beam in frames.instrument.beams)
-    if not (kind == "bias").any():
-        found.append(
-            "no bias frames: the overscan gives the level, but its pattern stays in"
-            if overscan
-            else "no bias frames and no overscan: the level comes off with the sky only, photon noise is overestimated"
-        )
+def _calibration_doubts(frames: FrameSet, flat: str) -> list[str]:
+    found = list(Calibrator(frames, flat=flat).warnings)
+    science, set_ = frames.science(), frames.calibrations()
+    kind = set_.column("kind")
     darks = set_.column("exposure")[kind == "dark"]
     longest = np.nanmax(np.append(science.column("exposure"), 0.0))
-    if darks.size == 0:
-        found.append("no dark frames: hot pixels and glow stay in; a smooth dark current comes off with the sky")
-    elif longest > 1.01 * np.nanmax(darks):
-        found.append(
-            f"the longest dark has {np.nanmax(darks):g} s, science up to {longest:g} s: its noise is scaled up with it"
-        )
-    flats = set(filters[kind == "flat"].tolist())
-    wanted = dict.fromkeys(science.column("filter").tolist())
-    for name in wanted:
-        if name not in flats:
-            found.append(
-                f"no flat in filter {name or '(none)'}: differences between pixels stay in; what does not move with "
-                "the plate cancels, image motion leaves of the order of 0.1 percent"
-            )
-    for name in sorted(flats - set(wanted)):
-        found.append(f"flats in filter {name or '(none)'} match no science frame")
-    if detector.gain is None and any(beam.gain is None for beam in frames.instrument.beams):
-        lacking = int(np.isnan(science.column("gain")).sum())
-        if lacking:
-            found.append(f"gain unknown for {lacking} science frames: counts cannot give errors; set detector.gain")
-    if detector.read_noise is None and any(beam.read_noise is None for beam in frames.instrument.beams):
-        found.append("read noise unknown: errors of faint sources come out too small unless bias frames give it")
-    return found
+    if darks.size and longest > 1.01 * np.nanmax(darks):
+        found.append(f"the longest dark has {np.nanmax(darks):g} s, science up to {longest:g} s: it is scaled up")
+    unused = set(set_.column("filter")[kind == "flat"].tolist()) - set(science.column("filter").tolist())
+    return found + [f"flats in filter {name or '(none)'} match no science frame" for name in sorted(unused)]
 
 
 def _visit_doubts(visit: FrameSet) -> list[str]:

@@ -243,10 +243,11 @@ def test_description(write: Callable[..., Path]) -> None:
     assert "flat  4 in V, plate at 0 (1), 22.5 (1), 45 (1), 67.5 (1)" in text
     found = doubts(frames)
     assert "parked.fits set aside: PLATE = 'parked': expected an angle in degrees" in found
-    assert any(line.startswith("no flat in filter R") for line in found)
+    assert any(line.startswith("filter R: no flats") for line in found)
+    assert not any("no flats" in line for line in doubts(frames, flat="off"))
     assert any(line.startswith("no dark frames") for line in found)
     assert "visit 2 (Star, R): a single cycle: no scatter of repeats to test the errors" in found
-    assert not any("bias" in line for line in found)
+    assert not any("no bias" in line for line in found)
 
 
 def test_frames_without_times_go_by_the_numbers_in_their_names(write: Callable[..., Path]) -> None:

@@ -319,7 +319,7 @@ def test_the_image_header_goes_before_the_primary(tmp_path: Path) -> None:
     image.header["BAND"] = ""
     other.header["AIRMASS"] = 1.5
     fits.HDUList([primary, other, image]).writeto(tmp_path / "m.fits")
-    for extension in (2, "sci", 0):
+    for extension in (2, "sci"):
         frame = read_frame(tmp_path / "m.fits", instrument(detector=Detector(extension=extension), airmass="AIRMASS"))
         assert (frame.reasons, frame.psi, frame.filter, frame.airmass) == ([], 45.0, "V", 1.5)
 
@@ -331,9 +331,10 @@ def test_beams_in_hdus_of_their_own(tmp_path: Path) -> None:
     images = [fits.ImageHDU(np.zeros((4, 5))), fits.ImageHDU(np.zeros((6, 5)))]
     fits.HDUList([primary, *images]).writeto(tmp_path / "m.fits")
     frame = read_frame(tmp_path / "m.fits", instrument(beams=beams))
-    assert (frame.reasons, frame.hdus, frame.shape) == ([], (1, 2), "5 x 4, 5 x 6")
+    assert (frame.reasons, frame.hdus, frame.shape) == ([], (1, 2), "5 x 4 and 5 x 6")
     fits.HDUList([primary, images[0]]).writeto(tmp_path / "n.fits")
-    assert read_frame(tmp_path / "n.fits", instrument(beams=beams)).reasons == ["no image in HDU 2"]
+    reason = "no image in HDU 2 (but in HDU 1: set extension)"
+    assert read_frame(tmp_path / "n.fits", instrument(beams=beams)).reasons == [reason]
 
 
 def test_compressed_files_read_like_plain_ones(tmp_path: Path) -> None:
@@ -350,18 +351,26 @@ def test_compressed_files_read_like_plain_ones(tmp_path: Path) -> None:
         assert (frame.mjd, frame.psi, frame.filter, frame.shape) == (wanted.mjd, 22.5, "V", "50 x 40")
 
 
-def test_extension_numbers_count_as_in_the_uncompressed_file() -> None:
+def test_which_hdu_an_extension_means() -> None:
     empty = fits.PrimaryHDU().header
-    image = fits.ImageHDU(np.zeros((2, 2))).header
+    image = fits.ImageHDU(np.zeros((2, 2)), name="SCI").header
     packed = fits.Header([("XTENSION", "BINTABLE"), ("ZIMAGE", True), ("ZNAXIS", 1), ("ZNAXIS1", 2)])
-    was_primary = packed.copy()
-    was_primary["ZSIMPLE"] = True
-    assert image_index((empty, was_primary, packed), 0) == 1
-    assert image_index((empty, was_primary, packed), 1) == 2
-    assert image_index((empty, packed, packed), 1) == 1
-    assert image_index((empty, packed, packed), 0) is None
-    assert image_index((empty, image), 0) == 1
+    assert image_index((empty, packed, packed), 0) == 1
+    assert image_index((empty, packed, packed), 2) == 2
+    assert image_index((empty, image), 0) is None
+    assert image_index((empty, image), 1) == 1
+    assert image_index((empty, image), "sci") == 1
+    assert image_index((empty, image), "other") is None
     assert image_index((empty, image), 2) is None
+
+
+def test_two_beams_that_compression_laid_together(tmp_path: Path) -> None:
+    beams = (Beam("o", 0.0, extension=0), Beam("e", 90.0, extension=1))
+    packed = [fits.CompImageHDU(np.zeros((4, 5), dtype=np.int16)) for _ in range(2)]
+    packed[0].header.update(PLAIN)
+    fits.HDUList([fits.PrimaryHDU(), *packed]).writeto(tmp_path / "a.fits.fz")
+    reasons = read_frame(tmp_path / "a.fits.fz", instrument(beams=beams)).reasons
+    assert reasons == ["HDU 1 is that of another beam: compression changed the numbers of the HDUs"]
 
 
 @pytest.mark.parametrize("suffix", ["fits", "fits.gz"])
@@ -427,6 +436,7 @@ def test_missing_files_and_folders_are_unread(tmp_path: Path) -> None:
 
 def test_images_that_are_not_flat(tmp_path: Path) -> None:
     assert "3 axes (5 x 4 x 3)" in read_frame(write(tmp_path / "cube.fits", (3, 4, 5)), instrument()).reasons[0]
+    assert read_frame(write(tmp_path / "one.fits", (1, 4, 5)), instrument()).shape == "5 x 4"
     header_only = fits.PrimaryHDU()
     header_only.header.update(PLAIN)
     header_only.writeto(tmp_path / "none.fits")
