@@ -21,7 +21,7 @@ from scipy.special import ndtri
 from scipy.stats import ncx2, qmc
 
 from hwpol.statistics.moments import Array
-from hwpol.statistics.posterior import FAR, variances
+from hwpol.statistics.posterior import FAR
 from hwpol.statistics.tables import LONGEST, ROUND, root
 
 _SCALE = 2.0  # p0 = scale x / (1 - x): x in [0, 1] covers every signal
@@ -125,7 +125,6 @@ class Belt:
         def excess(p0: Array) -> Array:
             return distance(x, y, p0, major, minor) - self.width(p0, stretch)
 
-        along, across, _ = variances(stretch, tilt)
         low = root(lambda p0: -excess(p0), np.zeros_like(p), p)
         reach = (null_radius(self.level) + 1.0) * major
         return low, root(excess, p, p + reach)

@@ -136,8 +136,9 @@ def debias(q: ArrayLike, u: ArrayLike, covariance: ArrayLike, method: str = "mod
         Their covariance.
     method : str
         "modified-asymptotic" (Plaszczynski et al. 2014; never negative, smooth, zero only at p = 0),
-        "mode" (Wardle & Kronberg 1974, solved exactly), "mean" (the measured p is taken as its mean, after Serkowski), "median",
-        "maximum-likelihood" (Simmons & Stewart 1985), "asymptotic" (sqrt(p^2 - b^2)).
+        "mode" (Wardle & Kronberg 1974, solved exactly), "mean" (Serkowski's: the measured p is taken for the
+        mean of its distribution), "median", "maximum-likelihood" (Simmons & Stewart 1985), "asymptotic"
+        (sqrt(p^2 - b^2)).
 
     Returns
     -------

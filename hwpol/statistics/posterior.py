@@ -41,8 +41,8 @@ def _transform() -> tuple[Array, Array, Array, Array]:
     matrix[0] *= 0.5
     grid = np.linspace(-1.0, 1.0, _GRID)
     series = (chebyshev.chebint(matrix, lbnd=-1), matrix, chebyshev.chebder(matrix))
-    integral, value, slope = (chebyshev.chebvander(grid, part.shape[0] - 1) @ part for part in series)
-    return nodes, integral.T, value.T, slope.T
+    integral, value, slope = (np.asarray(chebyshev.chebvander(grid, part.shape[0] - 1) @ part).T for part in series)
+    return nodes, integral, value, slope
 
 
 def marginal(r: Array, p: Array, stretch: Array, tilt: Array, half: Array) -> Array:
