@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from scipy.stats import chi2
 
 BLOCK_PIXELS = 16384
+TILE_ROWS = 16
 TILE_COLUMNS = 256
 KEPT_FRACTION = 0.9
 STACK_BYTES = 256 << 20
@@ -89,7 +90,7 @@ def clipped_mean(
     mean = np.empty((ny, nx), np.float32)
     variance = np.empty((ny, nx), np.float32)
     count = np.empty((ny, nx), np.int16)
-    rows = max(1, BLOCK_PIXELS // nx)
+    rows = min(TILE_ROWS, max(1, BLOCK_PIXELS // nx))
     for y in range(0, ny, rows):
         block = np.array(stack[:, y : y + rows], np.float32)
         shape = block.shape[1:]

@@ -165,9 +165,8 @@ def combine_flats(
     result = combine_frames(load, len(flats), shape)
     layers = np.zeros((3, *shape), np.float32)
     layers[0] = 1.0
-    with np.errstate(invalid="ignore"):
-        photons = sum(1.0 / (flat.gain * levels[flat.file][0][0]) for flat in flats) / len(flats) ** 2
-    for strip in strips:
+    for number, strip in enumerate(strips):
+        photons = sum(1.0 / (flat.gain * levels[flat.file][number][0]) for flat in flats) / len(flats) ** 2
         cut = (slice(strip.y0, strip.y1), slice(strip.x0, strip.x1))
         mean, variance = result.mean[cut], result.variance[cut]
         reference = np.nanmedian(mean[mean > LIT_FRACTION]) if (mean > LIT_FRACTION).any() else 1.0

@@ -116,16 +116,22 @@ def digest(kind: str, files: Sequence[str | Path], *options: object) -> str:
 
 
 def stored(cache: Path | None, key: str, build: Callable[[], Master]) -> Master:
-    """Return the master `key`: memory-mapped from `cache`, or built (and stored there, whole or not at all)."""
+    """Return the master `key`: memory-mapped from `cache`, or built (and stored there, whole or not at all).
+
+    A cache that cannot be written to is done without.
+    """
     if cache is None:
         return build()
     pixels, facts = cache / f"{key}.npy", cache / f"{key}.json"
     if not facts.exists():
         master = build()
-        cache.mkdir(parents=True, exist_ok=True)
-        _write_whole(pixels, lambda handle: np.save(handle, master.layers))
-        # The facts come last: where they stand, the pixels stand too.
-        _write_whole(facts, lambda handle: handle.write(json.dumps(master.facts).encode()))
+        try:
+            cache.mkdir(parents=True, exist_ok=True)
+            _write_whole(pixels, lambda handle: np.save(handle, master.layers))
+            # The facts come last: where they stand, the pixels stand too.
+            _write_whole(facts, lambda handle: handle.write(json.dumps(master.facts).encode()))
+        except OSError:
+            return master
     return Master(np.load(pixels, mmap_mode="r"), key, json.loads(facts.read_bytes()))
 
 
