@@ -153,7 +153,8 @@ def standards_table(standards: Any) -> str:
              percent(row["dq"], row["q_err"]), percent(row["du"], row["u_err"]),
              f"{row['dtheta']:+.2f}" if np.isfinite(row["dtheta"]) else "-",
              f"{row['sigma']:.1f}" if np.isfinite(row["sigma"]) else "-",
-             "yes" if row["used"] else "no", str(row["doubt"]) + (" (from memory)" if row["provenance"] == "memory" else "")]
+             "yes" if row["used"] else "no",
+             str(row["doubt"]) + (" (from memory)" if row["provenance"] == "memory" else "")]
         )  # fmt: skip
     head = ["standard", "filter", "role", "p (%)", "cat.", "theta (deg)", "cat.", "dq (%)", "du (%)", "dtheta",
             "sigma", "used", "remarks"]  # fmt: skip
