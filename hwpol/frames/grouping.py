@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -21,6 +23,7 @@ _AGAIN_LATER = 0.8
 _FIRST_AGAIN = 1.5
 _PAUSE = 1.0
 _UNUSUAL_START = 0.6
+_OTHER_NATURAL = 0.02
 _OTHER_START = 0.7
 _PAUSE_FACTOR = 5.0  # a gap this many times the usual one counts as a pause
 _RARE = 0.34  # positions seen less often than this part of the median are no part of the pass
@@ -119,7 +122,8 @@ def cycles(position: ArrayLike, mjd: ArrayLike) -> NDArray[np.int64]:
     The visit is cut, in time, at the places that cost least in all. A cycle that lacks a position costs 1; a position
     taken more (or less) often than the usual number of exposures in a row, 0.3 for each exposure when they stand
     together and 0.8 when others lie between, 1.5 when it is the position the cycle began with; a pause (5 times the
-    usual gap) inside a cycle 1; a start elsewhere than at the usual angle (unless the plate turns back there) 0.6.
+    usual gap) inside a cycle 1; a start elsewhere than at the usual angle 0.6, or 0.02 where the plate turns back
+    or stood at the usual last angle before.
     The usual number of exposures in a row and the usual start, the lowest angle or (for 0.7) the first, are those
     that make the sum smallest. So repeats at a position stay in one cycle, a spoilt
     exposure taken again does not shift the cycles behind it, passes may run in any order or to and fro, and a pass
@@ -175,24 +179,34 @@ def regular_positions(position: ArrayLike) -> set[int]:
     return set(found[counts >= _RARE * np.median(counts)].tolist()) if found.size else set()
 
 
-def _turns_back(sequence: list[int], begin: int) -> bool:
-    """Whether the plate comes and goes the same way at a run of equal positions of which `begin` is an inner frame."""
-    here = sequence[begin]
-    before = next((p for p in reversed(sequence[:begin]) if p != here), None)
-    after = next((p for p in sequence[begin:] if p != here), None)
-    return begin > 0 and sequence[begin - 1] == here and before is not None and before == after
+def _natural_starts(sequence: list[int], start: int) -> list[bool]:
+    """Where a pass may begin: at `start`, behind the position that usually stands before it, or where the plate
+    turns back, which is between two frames of a run that it enters and leaves from and to the same position."""
+    pairs = list(pairwise(sequence))
+    before = Counter(first for first, second in pairs if second == start != first)
+    last = before.most_common(1)[0][0] if before else None
+    natural = [True]
+    for at, (first, second) in enumerate(pairs, 1):
+        if first != second:
+            natural.append(second == start or first == last)
+            continue
+        entered = next((p for p in reversed(sequence[:at]) if p != second), None)
+        left = next((p for p in sequence[at:] if p != second), None)
+        natural.append(second == start or (entered is not None and entered == left))
+    return natural
 
 
 def _cut(sequence: list[int], pauses: list[bool], repeats: int, start: int) -> tuple[float, list[tuple[int, int]]]:
     """Cheapest cut into stretches and its cost, by going through the sequence once (dynamic programming)."""
     regular = regular_positions(sequence)
     longest = (2 * len(regular) + 2) * (repeats + 1)
+    natural = _natural_starts(sequence, start)
     cost = [0.0] + [math.inf] * len(sequence)
     origin = [0] * (len(sequence) + 1)
     for begin in range(len(sequence)):
         counts: dict[int, int] = {}
         lacking = set(regular)
-        paid = cost[begin] + (0.0 if sequence[begin] == start or _turns_back(sequence, begin) else _UNUSUAL_START)
+        paid = cost[begin] + (_OTHER_NATURAL if natural[begin] else _UNUSUAL_START) * (sequence[begin] != start)
         short = 0.0  # for positions taken less often than usual
         for end in range(begin, min(begin + longest, len(sequence))):
             here = sequence[end]

@@ -60,6 +60,8 @@ def cut(passes: str) -> list[str]:
         "23 0123 0123",
         "0123456789abcdef 0123",
         "01234567 0123567 01234567",
+        "01234567 01234567 0134567 1234567 01234567",
+        "0123 123 0123 012 0123",
         "012",
         # a single position: nothing tells one pass from the next but the frame
         "0 0 0 0",
