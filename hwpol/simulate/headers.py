@@ -25,7 +25,7 @@ def header_of(scenario: Scenario, one: Exposure, gain: float) -> fits.Header:
     instrument = scenario.instrument
     header = fits.Header()
     for name, value in scenario.headers.extra.items():
-        header[name] = value
+        _put(header, name, value)
     values: dict[str, Any] = {
         "kind": instrument.kinds[one.kind][0].upper(),
         "object": one.target or one.kind,
@@ -38,7 +38,7 @@ def header_of(scenario: Scenario, one: Exposure, gain: float) -> fits.Header:
     for name, value in values.items():
         keyword = instrument.keywords.get(name)
         if keyword is not None and value is not None:
-            header[keyword.keywords[0]] = _written(scenario, name, keyword, value)
+            _put(header, keyword.keywords[0], _written(scenario, name, keyword, value))
     _write_filter(scenario, header, one)
     _write_time(scenario, header, one)
     if one.target:
@@ -49,6 +49,12 @@ def header_of(scenario: Scenario, one: Exposure, gain: float) -> fits.Header:
     if plate is not None and one.has("nonsense-angle"):
         header[plate.keywords[0]] = "???"
     return header
+
+
+def _put(header: fits.Header, name: str, value: Any) -> None:
+    """Write one card; names beyond eight letters become HIERARCH cards, without a warning."""
+    long = len(name) > 8 and not name.upper().startswith("HIERARCH ")
+    header[f"HIERARCH {name}" if long else name] = value
 
 
 def _written(scenario: Scenario, name: str, keyword: Keyword, value: Any) -> Any:
@@ -95,7 +101,7 @@ def _write_filter(scenario: Scenario, header: fits.Header, one: Exposure) -> Non
     wheel = names.index(one.filter) % len(keyword.keywords) if one.filter else -1
     for number, name in enumerate(keyword.keywords):
         value = one.filter if number == wheel else (clear if len(keyword.keywords) > 1 else "")
-        header[name] = _written(scenario, "filter", keyword, value) if value else value
+        _put(header, name, _written(scenario, "filter", keyword, value) if value else value)
 
 
 def _write_time(scenario: Scenario, header: fits.Header, one: Exposure) -> None:
@@ -103,13 +109,14 @@ def _write_time(scenario: Scenario, header: fits.Header, one: Exposure) -> None:
     marked = one.start + {"start": 0.0, "middle": 0.5, "end": 1.0}[keyword.marks] * one.seconds / 86400
     if keyword.format in ("mjd", "jd"):
         value = marked if keyword.format == "mjd" else marked + 2400000.5
-        header[keyword.keywords[0]] = _written(scenario, "time", keyword, value)
+        _put(header, keyword.keywords[0], _written(scenario, "time", keyword, value))
         return
     date, _, clock = str(Time(marked, format="mjd", scale="utc", precision=3).isot).partition("T")
     if len(keyword.keywords) == 2:
-        header[keyword.keywords[0]], header[keyword.keywords[1]] = date, clock
+        _put(header, keyword.keywords[0], date)
+        _put(header, keyword.keywords[1], clock)
     else:
-        header[keyword.keywords[0]] = _written(scenario, "time", keyword, f"{date}T{clock}")
+        _put(header, keyword.keywords[0], _written(scenario, "time", keyword, f"{date}T{clock}"))
 
 
 def _write_position(scenario: Scenario, header: fits.Header, one: Exposure) -> None:
@@ -125,9 +132,9 @@ def _write_position(scenario: Scenario, header: fits.Header, one: Exposure) -> N
             angle = moved.ra if name == "ra" else moved.dec
         if keyword.unit is None and scenario.headers.sexagesimal:
             text = angle.to_string(unit=unit, sep=":", precision=3, pad=True, alwayssign=name == "dec")
-            header[keyword.keywords[0]] = text
+            _put(header, keyword.keywords[0], text)
         else:
-            header[keyword.keywords[0]] = _written(scenario, name, keyword, float(angle.deg))
+            _put(header, keyword.keywords[0], _written(scenario, name, keyword, float(angle.deg)))
     if scenario.headers.wcs:
         _write_wcs(scenario, header, one, star)
 

@@ -98,6 +98,8 @@ def _schedule(scenario: Scenario) -> Iterator[Exposure]:
             if target and pointed and target != pointed:
                 clock += scenario.slew
             pointed = target or pointed
+            if scenario.instrument.wave_plate is None:
+                angle = np.nan
             number += 1
             seconds = 0.0 if block.kind == "bias" else in_filter(block.exposure, filter_name)
             yield Exposure(

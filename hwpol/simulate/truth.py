@@ -144,4 +144,5 @@ def catalogue_tables(scenario: Scenario, exposures: tuple[Exposure, ...]) -> dic
                 "p_err": target.p_err, "theta": float(theta % 180), "theta_err": target.theta_err,
                 "variable": False, "reference": _REFERENCE, "provenance": "derived", "note": "",
             })  # fmt: skip
-    return {name: Table(rows) for name, rows in found.items() if rows}
+    roles = {"polarised.ecsv": "polarised", "zero_polarised.ecsv": "zero-polarised"}
+    return {name: Table(rows, meta={"role": roles[name]}) for name, rows in found.items() if rows}

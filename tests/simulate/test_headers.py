@@ -134,3 +134,21 @@ def test_missing_and_nonsense_angles(small):
     headers = [header for _, header in _headers(small)]
     assert "PLATE" not in headers[0]
     assert headers[1]["PLATE"] == "???"
+
+
+def test_long_keywords(small):
+    small["instrument"]["keywords"]["wave_plate"] = "INS HWP ANGLE"
+    assert [header["INS HWP ANGLE"] for _, header in _headers(small)] == [0.0, 22.5, 45.0, 67.5]
+
+
+def test_no_plate_no_angle(small):
+    small["instrument"].pop("wave_plate")
+    small["instrument"]["keywords"].pop("wave_plate")
+    small["block"] = [
+        {"kind": "flat", "filters": ["V"], "level": 100.0, "exposure": 1.0},
+        {"targets": ["Fern"], "filters": ["V"], "exposure": 10.0},
+    ]
+    for kind in ("flat", "science"):
+        ((one, header),) = _headers(small, kind)
+        assert math.isnan(one.psi)
+        assert "PLATE" not in header

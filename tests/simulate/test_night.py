@@ -152,6 +152,18 @@ def test_counts_of_frames_give_the_truth_back(small, tmp_path):
     assert sigma < 1e-3  # far below ip and p: the comparison means something
 
 
+def test_one_beam_without_a_plate(small, tmp_path):
+    """Light through the analyser alone: I (1 + q)/2 of what is observed."""
+    small["instrument"].pop("wave_plate")
+    small["instrument"]["keywords"].pop("wave_plate")
+    small["instrument"]["beam"] = small["instrument"]["beam"][:1]
+    small["filters"]["V"] = {}
+    small["beam"] = []
+    small["block"][1]["angles"] = []
+    (row,) = simulate(Scenario.from_dict(small), tmp_path).truth
+    assert row["flux"] == pytest.approx(20000.0 / 2 * (1 + 0.05 * np.cos(np.pi / 3)), rel=1e-12)
+
+
 def test_two_hdus(small, tmp_path):
     for number, beam in enumerate(small["instrument"]["beam"]):
         beam.update(extension=f"ARM{number}", section="[1:80,1:60]", offset=[0.0, 0.0])

@@ -47,6 +47,8 @@ def test_all_problems_at_once(small):
         (lambda t: t.update(headers={"format": {"plate": "{}"}}), "headers.format.plate"),
         (lambda t: (t["instrument"].pop("site"), t["filters"]["V"].update(ip_tel=[0.01, 0])), "instrument.site"),
         (lambda t: t.update(start="yesterday"), "start"),
+        (lambda t: t.update(fault=[{"kind": "hit", "frames": [1], "beam": 2, "amount": 9.0}]), "fault[1]: a hit"),
+        (lambda t: t.update(fault=[{"kind": "cloud", "frames": [1], "amount": 2.0}]), "fault[1].amount = 2"),
         (lambda t: t.update(instrument="absent.toml"), "absent.toml"),
     ],
 )

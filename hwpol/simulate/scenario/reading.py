@@ -165,6 +165,11 @@ def _contradictions(scenario: Scenario) -> list[str]:
             problems.append(
                 f"headers.format.{quantity}: unknown, expected one of {', '.join(sorted(instrument.keywords))}"
             )
+    for number, fault in enumerate(scenario.faults, 1):
+        if fault.kind == "hit" and (fault.amount <= 0 or fault.beam >= len(instrument.beams)):
+            problems.append(f"fault[{number}]: a hit has amount > 0 electrons and beam below {len(instrument.beams)}")
+        if fault.kind == "cloud" and not 0 <= fault.amount <= 1:
+            problems.append(f"fault[{number}].amount = {fault.amount:g}: expected a transparency from 0 to 1")
     if instrument.site is None and any(truth.ip_tel for truth in scenario.filters.values()):
         problems.append("instrument.site: missing, expected with ip_tel, which turns with the parallactic angle")
     return problems
