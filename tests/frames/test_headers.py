@@ -88,6 +88,7 @@ def test_plain_header(tmp_path: Path) -> None:
         ({"DATE-OBS": "2024/03/05", "UT": "01:02:03.5"}, Keyword(("DATE-OBS", "UT")), 3723.5 + 30),
         ({"DATE-OBS": "2024-03-05", "UT": " 1 02 03"}, Keyword(("UT", "DATE-OBS")), 3723 + 30),
         ({"DATE-OBS": "2024-03-05", "UT": 3723.0}, Keyword(("DATE-OBS", "UT"), unit="s"), 3723 + 30),
+        ({"DATE-OBS": "2024-03-05", "UT": 1.5}, Keyword(("UT", "DATE-OBS"), unit="h"), 5400 + 30),
         ({"DATE-OBS": "2024-03-05T09:09:09", "UT": "01:02"}, Keyword(("DATE-OBS", "UT")), 3720 + 30),
         ({"MJD-OBS": 60374.5}, Keyword(("MJD-OBS",), format="mjd"), 43200 + 30),
         ({"JD": "2460374.75"}, Keyword(("JD",), format="jd", marks="middle"), 21600),
@@ -263,6 +264,7 @@ def test_impossible_exposures_set_science_aside(tmp_path: Path, value: Any) -> N
         # 12h34m56.4s is 188.735 deg; -0d30m36s is -0.51 deg.
         ("12:34:56.4", "-00:30:36", {}, (188.735, -0.51)),
         ("12 34 56.4", "-00 30 36", {}, (188.735, -0.51)),
+        ("12h34m56.4s", "-00d30m36s", {}, (188.735, -0.51)),
         (188.735, -0.51, {}, (188.735, -0.51)),
         ("188.735", "-0.51", {}, (188.735, -0.51)),
         (-171.265, "+12:00", {}, (188.735, 12.0)),
