@@ -159,9 +159,12 @@ def combine(q: ArrayLike, u: ArrayLike, covariance: ArrayLike) -> Combined:
     if q_.ndim == 0:
         raise InputError("q has no axis of repeats: expected arrays (..., N)")
     lead, number = q_.shape[:-1], q_.shape[-1]
-    valid = np.isfinite(q_).reshape(-1, number)
-    vectors = np.stack([q_, u_], axis=-1).reshape(-1, number, 2)
-    matrices = np.stack([np.stack([vq, cov], axis=-1), np.stack([cov, vu], axis=-1)], axis=-2).reshape(-1, number, 2, 2)
+    sets = int(np.prod(lead))  # -1 would not do where there are no repeats at all
+    valid = np.isfinite(q_).reshape(sets, number)
+    vectors = np.stack([q_, u_], axis=-1).reshape(sets, number, 2)
+    matrices = np.stack([np.stack([vq, cov], axis=-1), np.stack([cov, vu], axis=-1)], axis=-2).reshape(
+        sets, number, 2, 2
+    )
     # Unusable repeats take part as zeros of no weight, so that the sums stay free of NaN.
     weights = np.where(valid[..., None, None], _inverse(matrices), 0.0)
     vectors = np.where(valid[..., None], vectors, 0.0)
