@@ -19,7 +19,9 @@ _OLD_DATE = re.compile(r"(\d{1,2})/(\d{1,2})/(\d{2})")
 _CLOCK = re.compile(
     r"(\d{1,2})[:\sh]+(\d{1,2})(?:[:\sm]+(\d{1,2}(?:\.\d*)?)\s*s?)?\s*(?:Z|UTC?|\+00:?00)?", re.IGNORECASE
 )
-_SEXAGESIMAL = re.compile(r"([+-]?)\s*(\d+)[:\shd]+(\d+)(?:[:\sm']+(\d+(?:\.\d*)?))?\s*(?:s|\"|'')?", re.IGNORECASE)
+_SEXAGESIMAL = re.compile(
+    r"([+-]?)\s*(\d+)[:\shd]+(\d+(?:\.\d*)?)(?:[:\sm']+(\d+(?:\.\d*)?))?\s*(?:s|\"|'')?", re.IGNORECASE
+)
 _EPOCH = re.compile(r"([JB]?)\s*(\d{4}(?:\.\d*)?)", re.IGNORECASE)
 _UNIT_WORDS = {"degree": "deg", "degrees": "deg", "sec": "s", "secs": "s", "second": "s", "seconds": "s"}
 _MJD_OF_ORDINAL_ZERO = -678576  # date(1858, 11, 17).toordinal() is 678576
