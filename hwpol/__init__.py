@@ -1,6 +1,6 @@
 """Optical imaging polarimetry behind a rotating half-wave plate: frames to calibrated Stokes parameters.
 
-    FrameSet --photometer--> Fluxes --demodulate--> Stokes --Calibration.apply--> Stokes
+FrameSet --photometer--> Fluxes --demodulate--> Stokes --Calibration.apply--> Stokes
 """
 
 from __future__ import annotations

@@ -213,7 +213,7 @@ class Fluxes:
     def take_sources(self, index: Any) -> Fluxes:
         """Return only some sources (a mask, a slice or indices along the source axis)."""
         chosen = np.atleast_1d(np.arange(self.shape[0])[index])
-        changes = {
+        changes: dict[str, Any] = {
             name: None if getattr(self, name) is None else getattr(self, name)[chosen]
             for name in ("flux", "variance", "flags", "sky", "x", "y")
         }

@@ -167,8 +167,8 @@ class Stokes:
     parallactic: Any = None
     sense: int = 1
     filter: str = ""
-    x: Array | None = None
-    y: Array | None = None
+    x: Any = None
+    y: Any = None
     mjd: Any = None
     calibration_covariance: Array | None = None
     spread: Any = 0.0
@@ -432,12 +432,13 @@ class Stokes:
         shared = [s.calibration_covariance for s in items if s.calibration_covariance is not None]
         flags = np.bitwise_or.reduce([s.flags for s in items])
         times = [s.mjd for s in items if s.mjd is not None]
+        intensities = [s.i for s in items if s.i is not None]
         return replace(
             first,
             q=result.q,
             u=result.u,
             covariance=adopt(result.covariance, result.scatter_covariance, result.chi2, result.dof)[0],
-            i=None if any(s.i is None for s in items) else np.sum([s.i for s in items], axis=0),
+            i=np.sum(intensities, axis=0) if len(intensities) == len(items) else None,
             v=None,
             mjd=np.mean(times, axis=0) if times else None,
             calibration_covariance=np.mean(shared, axis=0) if shared else None,

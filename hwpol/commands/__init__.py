@@ -70,7 +70,7 @@ def _parser() -> argparse.ArgumentParser:
         formatter_class=argparse.RawDescriptionHelpFormatter,
         usage="hwpol COMMAND ...",
     )
-    parser.add_argument("--version", action="version", version=_Version())  # type: ignore[arg-type]
+    parser.add_argument("--version", action="version", version=_Version())
     parser.add_argument("verb", nargs="?", choices=VERBS, metavar="COMMAND", help=argparse.SUPPRESS)
     return parser
 
@@ -96,7 +96,7 @@ def _guarded(run: object, options: argparse.Namespace) -> int:
             if not options.debug:
                 warnings.simplefilter("ignore")
             warnings.simplefilter("default", HwpolWarning)
-            warnings.showwarning = _show  # type: ignore[assignment]
+            warnings.showwarning = _show
             status = run(options)  # type: ignore[operator]
             sys.stdout.flush()
             return int(status)

@@ -35,7 +35,8 @@ def run(options: argparse.Namespace) -> int:
     with executor_for(options) as executor:
         answer = night.reduce(executor=executor, progress=Steps(options.quiet))
     truth = {(str(t["target"]), str(t["filter"])): t for t in simulated.truth if t["source"] == 0}
-    rows, pulls = [], []
+    rows: list[list[str]] = []
+    pulls: list[float] = []
     for row in answer.results:
         true = truth[str(row["target"]), str(row["filter"])]
         errors = np.hypot(row["q_err"], row["q_cal_err"]), np.hypot(row["u_err"], row["u_cal_err"])

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -58,14 +59,17 @@ def find_calibration(
         return calibration, notes
     if correction.calibration == "off":
         return None, ["calibration off: q and u stay in the instrument frame"]
-    standards = [
-        Standard.from_entry(_value(m, demodulation), m.role.entry, name=m.name, visit=m.visit)
-        for m in measured
-        if m.role.entry is not None
-    ]
-    usable = [s for s in standards if hasattr(s.measured, "demodulated") or np.isfinite(s.measured.q).all()]
-    for lost in (s for s in standards if s not in usable):
-        notes.append(f"{lost.name}, visit {lost.visit}: its angles do not determine q and u; not used as a standard")
+    usable = []
+    for item in measured:
+        if item.role.entry is None:
+            continue
+        value = observed_value(item, demodulation)
+        if isinstance(value, Stokes) and not np.isfinite(value.q).all():
+            notes.append(
+                f"{item.name}, visit {item.visit}: its angles do not determine q and u; not used as a standard"
+            )
+        else:
+            usable.append(Standard.from_entry(value, item.role.entry, name=item.name, visit=item.visit))
     if not usable:
         return None, [
             *notes,
@@ -73,7 +77,6 @@ def find_calibration(
             "polarisation in them; observe at least one zero-polarised and one polarised standard per filter, or give "
             "correction.calibration the calibration file of another night",
         ]
-    # A list would be compared by value below; identity is meant.
     try:
         calibration = Calibration.fit(
             usable,
@@ -83,25 +86,30 @@ def find_calibration(
             instrument=instrument,
             nights=nights,
             field_range=field_range,
-            solver=lambda fluxes, c: _solve(fluxes, demodulation, c),
+            solver=partial(_solve, demodulation=demodulation),
         )
     except HwpolError as problem:
         return None, [*notes, f"the standards do not give a calibration: {problem}"]
     return calibration, notes
 
 
-def _value(item: Measured, demodulation: DemodulationConfig) -> Stokes | Fluxes:
+def observed_value(item: Measured, demodulation: DemodulationConfig) -> Stokes | Fluxes:
     """Observed Stokes of a standard, or its fluxes where the field turned within the visit."""
     _, spread = mean_angle(item.fluxes.position_angle)
     _, turn = mean_angle(item.fluxes.parallactic - item.fluxes.position_angle)
     if np.nanmax([spread, 0.0 if np.isnan(turn) else turn]) > ROTATION_LIMIT / 10:
         return item.fluxes
-    return _solve(item.fluxes, demodulation, None)
+    stokes = _solve(item.fluxes, None, demodulation)
+    extra = np.diag(np.asarray(item.drift, dtype=float) ** 2)
+    covariance = stokes.covariance.copy()
+    covariance[..., :2, :2] += extra
+    return replace(stokes, covariance=covariance)
 
 
-def _solve(fluxes: Fluxes, demodulation: DemodulationConfig, calibration: Calibration | None) -> Stokes:
+def _solve(fluxes: Fluxes, calibration: Calibration | None, demodulation: DemodulationConfig) -> Stokes:
+    gain = "fixed" if demodulation.gain == "night" else demodulation.gain
     try:
-        solution = solve_visit(fluxes, method=demodulation.method, gain=demodulation.gain, calibration=calibration)
+        solution = solve_visit(fluxes, method=demodulation.method, gain=gain, calibration=calibration)
     except HwpolError:
         return demodulate(fluxes, calibration=calibration)
     return solution.stokes

@@ -54,7 +54,7 @@ def result_rows(
     solution: VisitSolution,
     fluxes: Fluxes,
     common: Mapping[str, Any],
-    per_source: Mapping[str, Array],
+    per_source: Mapping[str, NDArray[Any]],
     *,
     estimator: str,
     level: float,
@@ -72,7 +72,7 @@ def result_rows(
     photon_err : ndarray, shape (S,)
     """
     columns = stokes_columns(solution.stokes, estimator=estimator, level=level)
-    used = np.isfinite(fluxes.flux).any(axis=2)
+    used = np.asarray(np.isfinite(fluxes.flux).any(axis=2))
     seconds = used @ fluxes.exposure
     with np.errstate(invalid="ignore", divide="ignore"):
         flux = np.nansum(fluxes.flux, axis=(1, 2)) / seconds
@@ -132,7 +132,7 @@ def cycle_rows(
         here = fluxes.cycle == number
         part = cycles[:, c]
         columns = stokes_columns(part, estimator=estimator, level=level)
-        used = np.isfinite(fluxes.flux[:, here]).any(axis=2)
+        used = np.asarray(np.isfinite(fluxes.flux[:, here]).any(axis=2))
         seconds = used @ fluxes.exposure[here]
         for s in range(fluxes.shape[0]):
             with np.errstate(invalid="ignore", divide="ignore"):

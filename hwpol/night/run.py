@@ -10,7 +10,6 @@ from pathlib import Path
 
 import numpy as np
 
-from hwpol.correction import Calibration
 from hwpol.correction.catalogue import Catalogue
 from hwpol.errors import HwpolError, InputError, MissingError
 from hwpol.frames import Calibrator, FrameSet
@@ -27,6 +26,18 @@ from hwpol.night.visit import VisitResult, VisitTask, reduce_visit
 Progress = Callable[[int, int, str], None]
 
 CACHE = ".cache"
+
+
+@dataclass(frozen=True)
+class MeasuredNight:
+    """A night measured but not calibrated: `items` are its targets one by one, `failed` visits with their reason."""
+
+    frames: FrameSet
+    results: list[VisitResult]
+    roles: dict[int, list[Role]]
+    failed: dict[int, str]
+    items: tuple[Measured, ...]
+    notes: tuple[str, ...]
 
 
 @dataclass(frozen=True)
@@ -98,23 +109,23 @@ class Night:
             When there is nothing to reduce.
         """
         begun = time.time()
-        frames = self.inventory()
-        visits = frames.science().visits()
-        if not visits:
-            raise InputError(_nothing(frames))
-        catalogue = Catalogue.read(self.config.correction.catalogues)
-        tasks, roles = self._tasks(frames, visits, catalogue, only)
-        calibrator = tasks[0].calibrator
-        if progress is not None:
-            progress(0, len(tasks), "masters")
-        calibrator.prepare()
-        results, failed = self._run(tasks, executor, fresh, progress)
-        notes = [*calibrator.warnings, *(role.note for listed in roles.values() for role in listed if role.note)]
+        measured = self._measure(executor, only, fresh, progress)
+        frames, roles = measured.frames, measured.roles
+        notes = [*measured.notes]
         late = time_warning(frames.column("mjd")[frames.column("status") == "used"])
         if late and self.config.instrument.site is not None:
             notes.append(late)
-        results = self._share_gain(results)
-        calibration, more = self._calibration(results, roles, frames)
+        results = measured.results
+        calibration, more = find_calibration(
+            measured.items,
+            self.config.correction,
+            self.config.demodulation,
+            frame=self.config.instrument.orientation.frame,
+            instrument=self.config.instrument.name,
+            nights=nights_of(frames),
+            field_range=None if self.config.correction.field_order == 0 else _field_range(frames, self.config),
+        )
+        failed = measured.failed
         answer = assemble(
             self.config, frames, results, roles, calibration, failed, [*notes, *more], time.time() - begun
         )
@@ -123,6 +134,46 @@ class Night:
 
             write_products(self.config, answer)
         return answer
+
+    def standards(
+        self, *, executor: Executor | None = None, fresh: bool = False, progress: Progress | None = None
+    ) -> MeasuredNight:
+        """Measure the night's standard stars alone; visits finished before are taken up."""
+        return self._measure(executor, (), fresh, progress, standards_only=True)
+
+    def _measure(
+        self,
+        executor: Executor | None,
+        only: Sequence[str],
+        fresh: bool,
+        progress: Progress | None,
+        standards_only: bool = False,
+    ) -> MeasuredNight:
+        frames = self.inventory()
+        visits = frames.science().visits()
+        if not visits:
+            raise InputError(_nothing(frames))
+        catalogue = Catalogue.read(self.config.correction.catalogues)
+        tasks, roles = self._tasks(frames, visits, catalogue, only)
+        if standards_only:
+            tasks = [task for task in tasks if any(role.entry is not None for role in roles[task.number])]
+            if not tasks:
+                return MeasuredNight(frames, [], roles, {}, (), ())
+        calibrator = tasks[0].calibrator
+        if progress is not None:
+            progress(0, len(tasks), "masters")
+        calibrator.prepare()
+        results, failed = self._run(tasks, executor, fresh, progress)
+        results = self._share_gain(results)
+        notes = [*calibrator.warnings, *(role.note for listed in roles.values() for role in listed if role.note)]
+        items = tuple(
+            Measured(
+                name, result.task_number, result.fluxes.take_sources([s]), roles[result.task_number][s], result.drift
+            )
+            for result in results
+            for s, name in enumerate(result.names)
+        )
+        return MeasuredNight(frames, results, roles, failed, items, tuple(notes))
 
     def _tasks(
         self, frames: FrameSet, visits: list[FrameSet], catalogue: Catalogue, only: Sequence[str]
@@ -199,30 +250,6 @@ class Night:
 
         return share_gain(results)
 
-    def _calibration(
-        self, results: list[VisitResult], roles: dict[int, list[Role]], frames: FrameSet
-    ) -> tuple[Calibration | None, list[str]]:
-        config = self.config
-        measured = [
-            Measured(
-                name, result.task_number, result.fluxes.take_sources([s]), roles[result.task_number][s], result.drift
-            )
-            for result in results
-            for s, name in enumerate(result.names)
-        ]
-        field_range = None
-        if config.correction.field_order != 0:
-            field_range = _field_range(frames, config)
-        return find_calibration(
-            measured,
-            config.correction,
-            config.demodulation,
-            frame=config.instrument.orientation.frame,
-            instrument=config.instrument.name,
-            nights=_nights(frames),
-            field_range=field_range,
-        )
-
 
 def _attempt(task: VisitTask) -> VisitResult | HwpolError:
     """Reduce a visit; what was raised on purpose is a result too, the rest of the night goes on."""
@@ -243,7 +270,7 @@ def _nothing(frames: FrameSet) -> str:
     )
 
 
-def _nights(frames: FrameSet) -> tuple[str, ...]:
+def nights_of(frames: FrameSet) -> tuple[str, ...]:
     """Evening dates (UTC day of mjd - 0.5) of the science frames."""
     from astropy.time import Time
 

@@ -336,13 +336,11 @@ def _fluxes(task: VisitTask, measured: Measurement, radius: int, x: Array, y: Ar
 
 
 def _join(first: Fluxes, second: Fluxes) -> Fluxes:
-    return replace(
-        first,
-        **{
-            name: np.concatenate([getattr(first, name), getattr(second, name)])
-            for name in ("flux", "variance", "flags", "sky", "x", "y")
-        },
-    )
+    joined: dict[str, Any] = {
+        name: np.concatenate([getattr(first, name), getattr(second, name)])
+        for name in ("flux", "variance", "flags", "sky", "x", "y")
+    }
+    return replace(first, **joined)
 
 
 def _coordinates(task: VisitTask, world: World | None, fluxes: Fluxes) -> tuple[Array, Array]:

@@ -1,0 +1,83 @@
+"""`hwpol standards`: standards against catalogue values, over one or several nights; and what the tables hold."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+from typing import Any
+
+from hwpol.commands import ASIDE, DONE
+from hwpol.commands.running import add_execution, executor_for
+from hwpol.commands.screen import Steps, calibration_lines, notes, standards_table, table
+from hwpol.errors import ConfigError, InputError
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options."""
+    parser.add_argument("night", nargs="*", help="night files (TOML) of one instrument")
+    parser.add_argument("--output", metavar="FOLDER", help="folder for standards.ecsv and calibration.toml "
+                        "(default: the night's output; for several nights a folder 'standards')")  # fmt: skip
+    parser.add_argument("--list", action="store_true", help="show the standard-star tables instead")
+    parser.add_argument("--band", metavar="BAND", help="with --list: this band only")
+    parser.add_argument("--up", metavar="DATE", help="with --list and a night file: those observable from its "
+                        "site that night (evening date, 2026-03-14)")  # fmt: skip
+    add_execution(parser)
+
+
+def run(options: argparse.Namespace) -> int:
+    """Check standards, or list them."""
+    if options.list or options.up or options.band:
+        return _list(options)
+    if not options.night:
+        raise ConfigError("standards: give one or more night files, or --list to see the tables")
+    from hwpol.night import Night
+
+    nights = [Night.read(path) for path in options.night]
+    names = {night.config.instrument.name for night in nights}
+    if len(names) > 1:
+        raise InputError(
+            f"standards: the nights are of different instruments ({', '.join(sorted(names))}); expected one"
+        )
+    from hwpol.night.check import check_standards
+
+    with executor_for(options) as executor:
+        check = check_standards(nights, executor=executor, progress=Steps(options.quiet))
+    folder = (
+        Path(options.output) if options.output else (nights[0].config.output if len(nights) == 1 else Path("standards"))
+    )
+    if len(check.standards):
+        print(standards_table(check.standards))
+    if check.calibration is not None:
+        print("\nCalibration from these standards:")
+        for line in calibration_lines(check.calibration):
+            print(f"  {line}")
+    text = notes(check.notes)
+    if text:
+        print(f"\n{text}")
+    for path in check.write(folder):
+        print(f"Written: {path}")
+    doubted = any(str(text) for text in check.standards["doubt"]) if len(check.standards) else True
+    return ASIDE if doubted or check.calibration is None else DONE
+
+
+def _list(options: argparse.Namespace) -> int:
+    from hwpol.correction.listing import list_standards
+
+    site: Any = None
+    extra: list[Path] = []
+    if options.night:
+        from hwpol.night import Night
+
+        config = Night.read(options.night[0]).config
+        site, extra = config.instrument.site, list(config.correction.catalogues)
+    if options.up and site is None:
+        raise ConfigError(
+            "--up needs a night file whose instrument has a [site]: hwpol standards night.toml --list --up DATE"
+        )
+    rows = list_standards(band=options.band, up=options.up, site=site, extra=extra)
+    if not rows:
+        print("no standard star fits")
+        return ASIDE
+    head = list(rows[0])
+    print(table(head, [[str(row[name]) for name in head] for row in rows]))
+    return DONE
