@@ -76,7 +76,8 @@ def _to_bins(x: Floats, corner: int, n: int) -> Floats:
     return (x - corner + 0.5) / n - 0.5
 
 
-def _from_bins(x: Floats, corner: int, n: int) -> Floats:
+def from_bins(x: Floats, corner: int, n: int) -> Floats:
+    """Raw pixels of places counted in bins of n pixels from a box whose corner is `corner`."""
     return (x + 0.5) * n - 0.5 + corner
 
 
@@ -194,7 +195,7 @@ def measure(pixels: Pixels, x: ArrayLike, y: ArrayLike, fwhm: float, *, reach: f
         places = _to_bins(xs, pixels.x0, n_bin), _to_bins(ys, pixels.y0, n_bin)
         found = measure(binned(pixels, n_bin), *places, fwhm / n_bin, reach=far / n_bin)
         return found._replace(
-            x=_from_bins(found.x, pixels.x0, n_bin), y=_from_bins(found.y, pixels.y0, n_bin), err=found.err * n_bin
+            x=from_bins(found.x, pixels.x0, n_bin), y=from_bins(found.y, pixels.y0, n_bin), err=found.err * n_bin
         )
     side = 2 * _half(fwhm) + 1
     index = np.flatnonzero(usable)

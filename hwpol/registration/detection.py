@@ -16,6 +16,8 @@ from hwpol.registration.centroids import FWHM_PER_SIGMA, UNUSABLE, Bools, Floats
 _SHARP = 0.6
 # No optics and pixel give less; what is narrower is one pixel.
 _ONE_PIXEL = 1.25
+# Share of one pixel in its 3 x 3: 0.41 for a star of 1.3 pixels centred on it, 1 for a hot pixel.
+_LONE = 0.55
 _MOST_MEASURED = 3000
 
 
@@ -226,27 +228,32 @@ def _field_width(flat: Pixels, bad: Bools) -> float | None:
         return None
     table = np.array(sorted(found, reverse=True))
     tree = cKDTree(table[:, 1:3])
-    free = np.ones(len(table), bool)
-    chosen = []
+    free, taken = np.ones(len(table), bool), np.zeros(len(table), bool)
     for i in range(len(table)):
-        if free[i]:
-            chosen.append(i)
-            free[tree.query_ball_point(table[i, 1:3], 1.5 * table[i, 3] + 2)] = False
+        around = tree.query_ball_point(table[i, 1:3], 1.5 * table[i, 3] + 2)
+        # A coarse peak may sit a bin beside the small source that made it.
+        if free[i] and not taken[around].any():
+            taken[i] = True
+            free[around] = False
+    chosen = np.flatnonzero(taken)
     table = table[chosen]
-    widths, snr = [], []
+    widths, snr, full = [], [], []
     saturated = _near_saturation(flat)
     for scale in np.unique(table[:, 3]):
         part = table[table[:, 3] == scale][:80]
         place = measure(flat, part[:, 1], part[:, 2], scale)
         major, minor = axes_of(flat, place.x, place.y, 1.3 * scale)
         keep = place.ok & (minor > _ONE_PIXEL) & (minor > 0.5 * major)
-        rows, columns = (np.clip(np.rint(v).astype(int), 0, m - 1) for v, m in
-                         zip((place.y, place.x), flat.data.shape, strict=True))  # fmt: skip
-        full = saturated[rows, columns]
-        keep &= ~full | bool(full[keep].all())
+        rows, columns = (
+            np.clip(np.rint(v).astype(int), 0, m - 1) for v, m in zip((place.y, place.x), flat.data.shape, strict=True)
+        )
+        keep &= _concentration(flat, rows, columns) < _LONE
         widths.append(np.sqrt(major * minor)[keep])
         snr.append(np.minimum(place.snr[keep], 300.0))
-    width, weight = np.concatenate(widths), np.concatenate(snr)
+        full.append(saturated[rows, columns][keep])
+    width, weight, spilt = np.concatenate(widths), np.concatenate(snr), np.concatenate(full)
+    if not spilt.all():
+        width, weight = width[~spilt], weight[~spilt]
     if not len(width):
         return None
     order = np.argsort(width)
@@ -287,8 +294,9 @@ def _find(flat: Pixels, bad: Bools, fwhm: float, threshold: float) -> Stars:
     narrow |= (major < _ONE_PIXEL * 0.8) & (snr > 20)
     # Bad columns and long tracks: no convergence, or thin.
     narrow |= (snr > 15) & (~np.isfinite(minor) | ((minor < 0.45 * major) & (minor < 0.85 * fwhm)))
-    # Moments of an undersampled star follow its place within the pixel.
-    narrow &= fwhm >= 2.0
+    if fwhm < 2.0:
+        # Moments of an undersampled star follow its place within the pixel: only what is long as well is no star.
+        narrow &= ~(major < 2.0 * fwhm)
     alone = _distinct(x, y, 0.5 * fwhm) & ~(narrow & ~saturated)
     flags = _flags(flat, bad, x, y, fwhm, saturated)
     peak = flat.data[rows, columns].astype(np.float64)
@@ -300,14 +308,13 @@ def _find(flat: Pixels, bad: Bools, fwhm: float, threshold: float) -> Stars:
 def _one_per_plateau(
     full: Bools, rows: NDArray[np.int64], columns: NDArray[np.int64]
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """Keep the first (highest) peak of each saturated patch: a bleeding star is one star."""
-    from scipy.ndimage import label
+    """One peak for each saturated patch, where the patch is widest: a bleeding star is one star."""
+    from scipy.ndimage import distance_transform_edt, label, maximum_position
 
-    number = label(full)[0][rows, columns]
-    first = np.zeros(len(rows), bool)
-    first[np.unique(number, return_index=True)[1]] = True
-    keep = first | (number == 0)
-    return rows[keep], columns[keep]
+    patches, count = label(full)
+    free = patches[rows, columns] == 0
+    widest = np.array(maximum_position(distance_transform_edt(full), patches, np.arange(1, count + 1)), dtype=np.int64)
+    return np.concatenate([widest[:, 0], rows[free]]), np.concatenate([widest[:, 1], columns[free]])
 
 
 def _is_sharp(
@@ -335,6 +342,7 @@ def _is_sharp(
     top = flat.data[r, c].astype(np.float64)
     mean = (flat.data[around_r, around_c] * good).sum(axis=0) / count
     amplitude = flux / (2 * np.pi * sigma**2)
+    lone_pixel = _concentration(flat, r, c) > _LONE
     with np.errstate(divide="ignore", invalid="ignore"):
         sharpness = (top - mean) / amplitude
         noise = np.sqrt(flat.variance[r, c].astype(np.float64)) / amplitude
@@ -342,7 +350,20 @@ def _is_sharp(
     lone = np.pi * sigma**2
     # Below about 1.5 pixels the two meet and the pixel decides nothing.
     limit = np.sqrt(star * lone) if lone > 1.15 * star else np.inf
-    return (good.sum(axis=0) >= 3) & (sharpness - limit > 2.0 * np.minimum(noise, sharpness / 3.0))
+    sharp = lone_pixel | (sharpness - limit > 2.0 * np.minimum(noise, sharpness / 3.0))
+    return (good.sum(axis=0) >= 3) & sharp
+
+
+def _concentration(flat: Pixels, rows: NDArray[np.int64], columns: NDArray[np.int64]) -> Floats:
+    """Share of the brightest pixel in the sum of the 3 x 3 about a place, less two sigma of its noise."""
+    ny, nx = flat.data.shape
+    near = np.arange(-1, 2)
+    r = np.clip(rows[:, None, None] + near[:, None], 0, ny - 1)
+    c = np.clip(columns[:, None, None] + near, 0, nx - 1)
+    box = flat.data[r, c].reshape(len(rows), -1).astype(np.float64)
+    noise = np.sqrt(flat.variance[r, c].reshape(len(rows), -1).max(axis=1, initial=0.0).astype(np.float64))
+    total = np.maximum(box.sum(axis=1), 1e-6)
+    return (box.max(axis=1, initial=0.0) - 2.0 * noise) / total
 
 
 def _distinct(x: Floats, y: Floats, separation: float) -> Bools:

@@ -140,7 +140,8 @@ def search(
     """Motion between two lists of positions (brightest first) without a start value, and its number of pairs.
 
     Shifts of any size by voting at the given rotation (degrees); where those do not convince, rotations up to
-    `most_rotation` on either side as well, in steps that move the outermost star by the tolerance. None where no motion stands out from chance.
+    `most_rotation` on either side as well, in steps that move the outermost star by the tolerance. None where no
+    motion stands out from chance.
     """
     a, b = first[:120], second[:120]
     if not len(a) or not len(b):

@@ -176,6 +176,20 @@ def _with_stars(
     template = np.column_stack([reference.stars.x, reference.stars.y])
     maps = _refined_maps(reference, places, errors)
     solution = best_motion(places, errors, template, maps, shift, rotation, pivot)
+    wander, sigma = beam_wander(solution, errors)
+    size = float(np.sqrt(np.mean(wander**2)))
+    if sigma > _WANDER_SIGMA and size > _WANDER_PIXELS:
+        notes.append(f"the beams move against each other by {size:.3f} pixel rms from frame to frame: each is followed")
+        for _ in range(3):
+            solution = best_motion(places - wander[:, :, None], errors, template, maps, shift, rotation, pivot)
+            wander = wander + beam_wander(solution, errors)[0]
+    else:
+        wander = np.zeros_like(wander)
+    # The first beam carries the frames' shift; the others move against it.
+    solution = replace(solution, shift=solution.shift + wander[:, 0])
+    wander = wander - wander[:, :1]
+    if wander.any():
+        maps = _refined_maps(reference, places - wander[:, :, None], errors)
     origin = 0 if ok[0] else reference.frame
     shift, rotation, template = relative_to(solution, origin, pivot)
     measured = np.isfinite(errors[:, 0]).any(0)
@@ -184,13 +198,6 @@ def _with_stars(
         x=np.where(measured, template[:, 0], reference.stars.x),
         y=np.where(measured, template[:, 1], reference.stars.y),
     )
-    wander, sigma = beam_wander(solution)
-    wander = wander - wander[origin]
-    size = float(np.sqrt(np.mean(wander**2)))
-    if sigma > _WANDER_SIGMA and size > _WANDER_PIXELS:
-        notes.append(f"the beams move against each other by {size:.3f} pixel rms from frame to frame: each is followed")
-    else:
-        wander = np.zeros_like(wander)
     return Placement(
         stars, shift, np.where(ok, solution.shift_err, np.nan), rotation, pivot,
         (solution.weight > 0).sum((1, 2)).astype(np.int64), np.stack([m.fwhm for m in got]),

@@ -51,7 +51,7 @@ def solve(
     rotate : bool
         Whether frames may turn.
     """
-    base = np.where(np.isfinite(errors), 1.0 / (np.nan_to_num(errors, nan=1.0) ** 2 + _FLOOR**2), 0.0)
+    base = _base_weight(errors)
     weight = base.copy()
     shift = shift.copy()
     rotation = rotation.copy() if rotate else np.zeros_like(rotation)
@@ -77,6 +77,10 @@ def solve(
     reduced = np.maximum(_scatter(residual, weight, base), 1.0)
     chi2 = float((weight[..., None] * residual**2).sum())
     return Solution(shift, error * reduced, rotation, template + own[0], residual, weight, chi2)
+
+
+def _base_weight(errors: Floats) -> Floats:
+    return np.where(np.isfinite(errors), 1.0 / (np.nan_to_num(errors, nan=1.0) ** 2 + _FLOOR**2), 0.0)
 
 
 def _frame_steps(residual: Floats, weight: Floats, lever: Floats, rotate: bool) -> tuple[Floats, Floats]:
@@ -161,17 +165,21 @@ def relative_to(solution: Solution, k: int, pivot: tuple[float, float]) -> tuple
     return solution.shift - turned, rotation, np.column_stack([x[k], y[k]])
 
 
-def beam_wander(solution: Solution) -> tuple[Floats, float]:
-    """Mean residual of each beam in each frame (K, B, 2), and its significance in sigma over the visit."""
-    w = solution.weight.sum(-1)
-    mean = (solution.weight[..., None] * solution.residual).sum(2) / np.maximum(w, 1e-300)[..., None]
+def beam_wander(solution: Solution, errors: Floats) -> tuple[Floats, float]:
+    """Mean residual of each beam in each frame (K, B, 2), and its significance in sigma over the visit.
+
+    The stars' own errors (K, B, N) judge: weights that were lowered for scatter would hide what is looked for.
+    """
+    weight = np.where(solution.weight > 0, _base_weight(errors), 0.0)
+    w = weight.sum(-1)
+    mean = (weight[..., None] * solution.residual).sum(2) / np.maximum(w, 1e-300)[..., None]
     mean[w <= 0] = 0.0
     frames, beams = int((w.sum(1) > 0).sum()), w.shape[1]
     free = 2 * (frames - 1) * (beams - 1)
     if free < 1:
         return mean, 0.0
-    left = np.where(solution.weight[..., None] > 0, solution.residual - mean[:, :, None], 0.0)
-    inner = int((solution.weight > 0).sum()) - int((w > 0).sum()) - int((solution.weight.sum(0) > 0).sum())
-    noise = max(float((solution.weight[..., None] * left**2).sum()) / (2 * inner), 1.0) if inner > 3 else 1.0
+    left = np.where(weight[..., None] > 0, solution.residual - mean[:, :, None], 0.0)
+    inner = int((weight > 0).sum()) - int((w > 0).sum()) - int((weight.sum(0) > 0).sum())
+    noise = max(float((weight[..., None] * left**2).sum()) / (2 * inner), 1.0) if inner > 3 else 1.0
     chi2 = float((w[..., None] * mean**2).sum()) / noise
     return mean, (chi2 - free) / float(np.sqrt(2 * free))

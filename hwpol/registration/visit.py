@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from hwpol.flags import Flag
 from hwpol.pixels import Box, Pixels
 from hwpol.registration.beams import BeamMap, BeamMatch, beam_offsets, fit_beam_map, shift_map
-from hwpol.registration.centroids import Measured, fwhm_of, measure
+from hwpol.registration.centroids import Measured, binned, from_bins, fwhm_of, measure
 from hwpol.registration.detection import Stars, detect
 from hwpol.registration.matching import Motion, fit_motion, search, vote
 
@@ -37,14 +37,17 @@ class Layout:
                 arrays[hdu] = images(k, b)
         return [arrays[hdu] for hdu in self.hdu_of_beam]
 
-    def detect(self, pixels: list[Pixels], fwhm: float | None) -> list[Stars]:
-        """Stars of each beam's section; beams that share array and section share the list object."""
+    def detect(self, pixels: list[Pixels], fwhm: float | None, *, coarse: bool = False) -> list[Stars]:
+        """Stars of each beam's section; beams that share array and section share the list object.
+
+        `coarse` works on binned pixels: places good to a tenth of the width, in a fraction of the time.
+        """
         found: dict[int, Stars] = {}
         lists: dict[tuple[int, Box | None], Stars] = {}
         result = []
         for b, hdu in enumerate(self.hdu_of_beam):
             if hdu not in found:
-                found[hdu] = detect(pixels[b], fwhm=fwhm)
+                found[hdu] = _coarsely(pixels[b], fwhm) if coarse and fwhm else detect(pixels[b], fwhm=fwhm)
             key = (hdu, self.sections[b])
             if key not in lists:
                 inside = self.inside(b, pixels[b], found[hdu].x, found[hdu].y, 0.0)
@@ -59,6 +62,15 @@ class Layout:
             (x > box.x0 - 0.5 + margin) & (x < box.x1 - 0.5 - margin)
             & (y > box.y0 - 0.5 + margin) & (y < box.y1 - 0.5 - margin)
         )  # fmt: skip
+
+
+def _coarsely(pixels: Pixels, fwhm: float) -> Stars:
+    """Stars of an image binned to two pixels a width."""
+    n = int(np.clip(fwhm // 2, 1, 8))
+    if n == 1:
+        return detect(pixels, fwhm=fwhm)
+    stars = detect(binned(pixels, n), fwhm=fwhm / n)
+    return replace(stars, x=from_bins(stars.x, pixels.x0, n), y=from_bins(stars.y, pixels.y0, n), fwhm=stars.fwhm * n)
 
 
 @dataclass(frozen=True)
@@ -150,7 +162,7 @@ class Follower:
     def _candidates(self, pixels: list[Pixels], guesses: list[Motion]) -> Iterator[Motion]:
         yield from guesses
         for width in (self.width, None):
-            lists = self.layout.detect(pixels, width)
+            lists = self.layout.detect(pixels, width, coarse=True)
             for old, new in zip(self.reference.lists, lists, strict=True):
                 if not len(old) or not len(new):
                     continue
