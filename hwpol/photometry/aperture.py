@@ -38,7 +38,8 @@ class ApertureSums:
         Pixels touched by the aperture that are masked as BAD, SATURATED, COSMIC_RAY, OUTSIDE (in this order; `KINDS`).
         Pixels beyond the box are OUTSIDE.
     usable : ndarray of bool, shape (S, R)
-        No pixel SATURATED, COSMIC_RAY or OUTSIDE, and at most `MOST_REPAIRED` BAD ones, all bridged and none in the core.
+        No pixel SATURATED, COSMIC_RAY or OUTSIDE, and at most `MOST_REPAIRED` BAD ones, all
+        bridged and none in the core.
     """
 
     flux: Floats

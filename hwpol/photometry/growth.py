@@ -81,13 +81,12 @@ def shapes(data: Floats, dx: Floats, dy: Floats, *, start: float = 3.0) -> Shape
         x, y, image = gx[active], gy[active], stamps[active]
         cxx, cyy, cxy = cov[active].T
         det = cxx * cyy - cxy**2
-        weight = np.exp(
-            -0.5 * (cyy[:, None] * x * x - 2 * cxy[:, None] * x * y + cxx[:, None] * y * y) / det[:, None]
-        )
+        weight = np.exp(-0.5 * (cyy[:, None] * x * x - 2 * cxy[:, None] * x * y + cxx[:, None] * y * y) / det[:, None])
         weight *= image
         total = weight.sum(axis=1)
         with np.errstate(divide="ignore", invalid="ignore"):
-            moments = 2.0 * np.stack([(weight * x * x).sum(1), (weight * y * y).sum(1), (weight * x * y).sum(1)]) / total
+            raw = np.stack([(weight * x * x).sum(1), (weight * y * y).sum(1), (weight * x * y).sum(1)])
+            moments = 2.0 * raw / total
         fresh = moments.T
         sound = (
             (total > 0)

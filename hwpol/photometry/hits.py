@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from functools import partial
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.ndimage import maximum_filter, uniform_filter
@@ -19,6 +22,8 @@ PEAK = 5.0
 
 _PIXEL = 3.0  # sigma from which a pixel counts towards the charge of a hit
 _BRIGHT = 30.0  # signal-to-noise ratio of an image from which its own shape is fitted
+_FEW = 6  # images a frame up to which the median over them is not trusted
+_PERSUADED = 30.0  # drop in the sum of min(z^2, 9) for which one image's word replaces the median: four pixels or so
 _FIRST = 12  # brightest sources that choose the profile
 _PLACE = 5  # pixels across the place in which charge is added up: holds five of a track of six
 _CHUNK_PIXELS = 1 << 19
@@ -55,11 +60,12 @@ def find_hits(
 
     Notes
     -----
-    Each image is predicted from what a hit cannot change alone: an elliptical Moffat profile whose position and width are
-    split into a part of the source and beam (median over the frames) and a part of the frame (median over sources
-    and beams), its own robust amplitude, and the median over the frames of what the profile leaves. The scatter of the
-    frames about that, relative to the image, is allowed for as an error of the prediction. What stands above it and
-    above the same place in the frame's other beams is charge of a hit. A hit may be reported in both beams of a frame.
+    Each image is predicted from what a hit cannot change alone: a radial profile shared by all, an elliptical shape
+    and a position that are split into a part of the source and beam (median over the frames) and a part of the frame
+    (median over sources and beams), its own robust amplitude, and the median over the frames of what the profile
+    leaves. The scatter of the frames about that, relative to the image, is allowed for as an error of the prediction.
+    What stands above it and above the same place in the frame's other beams is charge of a hit. A hit may be reported
+    in both beams of a frame.
     """
     count, frames, beams, size, _ = data.shape
     sizes = np.asarray(radii, dtype=np.float64)
@@ -74,18 +80,18 @@ def find_hits(
     noise = np.where(good, variance, 1.0).astype(np.float32).reshape(flat)
     good = good.reshape(flat)
     at = np.stack([np.where(placed, dx, 0.0), np.where(placed, dy, 0.0)], axis=-1)
-    shape, beta = _shapes(values, noise, good, at, fwhm)
+    shape, profile = _shapes(values, noise, good, at, fwhm)
     step = max(1, _CHUNK_PIXELS // (frames * beams * size * size))
     for i in range(0, count, step):
         part = slice(i, i + step)
-        out[:, part] = _judge(values[part], noise[part], good[part], at[part], shape[part], beta, sizes)
+        out[:, part] = _judge(values[part], noise[part], good[part], at[part], shape[part], profile, sizes)
     return out & placed
 
 
 def _shapes(
     data: NDArray[np.float32], variance: NDArray[np.float32], good: NDArray[np.bool_], at: Floats, fwhm: Floats | None
-) -> tuple[Floats, float]:
-    """Predict x, y, a, b, c of every image from what sources, beams and frames share; (S, K, B, 5) and the index."""
+) -> tuple[Floats, profiles.Profile]:
+    """Predict x, y, a, b, c of every image from what sources, beams and frames share, (S, K, B, 5), and the profile."""
     lead, pixels = data.shape[:3], data.shape[3]
     width = np.full(lead, np.nan) if fwhm is None else np.asarray(fwhm, dtype=np.float64)
     typical = float(np.median(width[np.isfinite(width)])) if np.isfinite(width).any() else 3.0
@@ -102,56 +108,82 @@ def _shapes(
     result[..., 2] = result[..., 4] = gauss / 3.0
     beta = 3.0
     if not bright.any():
-        return result, beta
-    fitted = np.full((*lead, 5), np.nan)
+        return result, profiles.plain(beta, typical)
     where = np.argwhere(bright)
     first = np.argsort(-np.median(np.where(bright, ratio, 0.0), axis=(1, 2)))[:_FIRST]
-    trial = where[np.isin(where[:, 0], first)]
+    trial = tuple(where[np.isin(where[:, 0], first)].T)
+    start = np.zeros((*lead, 5))
+    start[..., :2] = at
     costs = []
     for index in profiles.BETAS:
-        _, cost = _fit(data, variance, good, at, gauss, trial, index)
-        costs.append(np.median(cost))
-    beta = profiles.BETAS[int(np.argmin(costs))]
-    step = max(1, _CHUNK_PIXELS // (8 * pixels))
-    for i in range(0, len(where), step):
-        rows = where[i : i + step]
-        found, cost = _fit(data, variance, good, at, gauss, rows, beta)
-        found[~np.isfinite(cost)] = np.nan
-        fitted[tuple(rows.T)] = found
+        start[..., 2] = start[..., 4] = gauss / index
+        candidate = profiles.plain(index, typical)
+        costs.append(np.median(profiles.fit(data[trial], variance[trial], good[trial], start[trial], candidate)[1]))
+    profile = profiles.plain(profiles.BETAS[int(np.argmin(costs))], typical)
+    start[..., 2] = start[..., 4] = gauss / profile.beta
     weight = np.minimum(np.where(bright, ratio, 0.0), 300.0)  # beyond that the shape, not the noise, limits a fit
-    for parameter in range(5):
-        value = fitted[..., parameter]
-        if parameter < 2:
-            value = value - at[..., parameter]
-        elif parameter != 3:
-            value = np.log(value)
-        else:
-            value = value / np.sqrt(fitted[..., 2] * fitted[..., 4])
-        static, frame = profiles.shared(value, weight)
-        if parameter < 2:
-            static[~bright.any(axis=1)] = 0.0
-        result[..., parameter] = static[:, None, :] + frame[:, None]
-    result[..., :2] += at
-    result[..., 2], result[..., 4] = np.exp(result[..., 2]), np.exp(result[..., 4])
-    result[..., 3] *= np.sqrt(result[..., 2] * result[..., 4])
-    return result, beta
+    step = max(1, _CHUNK_PIXELS // (8 * pixels))
+    for _ in range(2):
+        fitted = np.full((*lead, 5), np.nan)
+        for i in range(0, len(where), step):
+            rows = tuple(where[i : i + step].T)
+            found, cost = profiles.fit(data[rows], variance[rows], good[rows], start[rows], profile)
+            found[~np.isfinite(cost)] = np.nan
+            fitted[rows] = found
+        start = _common(fitted, weight, at, partial(_worth, data, variance, good, bright, profile))
+        profile = profiles.refine(
+            profiles.plain(profile.beta, typical), data[trial], variance[trial], good[trial], start[trial]
+        )
+    return start, profile
 
 
-def _fit(
+def _worth(
     data: NDArray[np.float32],
     variance: NDArray[np.float32],
     good: NDArray[np.bool_],
-    at: Floats,
-    gauss: Floats,
-    rows: NDArray[np.intp],
-    beta: float,
-) -> tuple[Floats, Floats]:
-    index = tuple(rows.T)
-    start = np.zeros((len(rows), 5))
-    start[:, :2] = at[index]
-    start[:, 2] = start[:, 4] = gauss[index] / beta
-    shape, _, cost = profiles.fit(data[index], variance[index], good[index], start, beta)
-    return shape, cost
+    bright: NDArray[np.bool_],
+    profile: profiles.Profile,
+    k: int,
+    shape: Floats,
+) -> float:
+    """Return how badly shapes (S, B, 5) describe the bright images of frame k."""
+    use = bright[:, k]
+    pixels, noise, fine = data[:, k][use], variance[:, k][use], good[:, k][use]
+    image = profile.images(profiles.grid(round(np.sqrt(data.shape[-1]))), shape[use])
+    return float(profiles.misfit(pixels, noise, fine, image, profiles.amplitude(pixels, noise, fine, image)).sum())
+
+
+def _common(fitted: Floats, weight: Floats, at: Floats, worth: Callable[[int, Floats], float]) -> Floats:
+    """Predict shapes from the parts that sources, beams and frames share.
+
+    With few images a frame, the median over them does not hold against a hit in one: then each image's own word and
+    their mean are tried on all images of the frame, and the best is taken.
+    """
+    own = _to_free(fitted, at)
+    split = [profiles.shared(own[..., i], weight) for i in range(5)]
+    static = np.stack([part[0] for part in split], axis=-1)
+    frame = np.stack([part[1] for part in split], axis=-1)
+    static[~np.isfinite(own[..., 0]).any(axis=(1, 2)), :, :2] = 0.0
+    for k in range(fitted.shape[1]):
+        words = (own[:, k] - static)[np.isfinite(own[:, k, :, 0])]
+        if 2 <= len(words) <= _FEW:
+            words = np.concatenate([frame[k : k + 1], words])
+            tried = [worth(k, _from_free(static + word, at[:, k])) for word in words]
+            if min(tried) < tried[0] - _PERSUADED:
+                frame[k] = words[int(np.argmin(tried))]
+    return _from_free(static[:, None] + frame[:, None], at)
+
+
+def _to_free(shape: Floats, at: Floats) -> Floats:
+    """Shapes as numbers of which differences are shared: shift, log a, skew, log c."""
+    x, y, a, b, c = np.moveaxis(shape, -1, 0)
+    return np.stack([x - at[..., 0], y - at[..., 1], np.log(a), b / np.sqrt(a * c), np.log(c)], axis=-1)
+
+
+def _from_free(free: Floats, at: Floats) -> Floats:
+    x, y, a, b, c = np.moveaxis(free, -1, 0)
+    a, c = np.exp(a), np.exp(c)
+    return np.stack([x + at[..., 0], y + at[..., 1], a, b * np.sqrt(a * c), c], axis=-1)
 
 
 def _judge(
@@ -160,15 +192,16 @@ def _judge(
     good: NDArray[np.bool_],
     at: Floats,
     shape: Floats,
-    beta: float,
+    profile: profiles.Profile,
     radii: Floats,
 ) -> NDArray[np.bool_]:
     count, frames, beams, pixels = data.shape
     size = round(np.sqrt(pixels))
     many = (count * frames * beams, pixels)
-    image, _ = profiles.moffat(profiles.grid(size), shape.reshape(-1, 5), beta)
-    level = profiles.amplitude(data.reshape(many), variance.reshape(many), good.reshape(many), image)
-    level = np.maximum(level, 0.0).reshape(count, frames, beams, 1)
+    height, image = profiles.settle(
+        data.reshape(many), variance.reshape(many), good.reshape(many), profile, shape.reshape(-1, 5)
+    )
+    level = np.maximum(height, 0.0).reshape(count, frames, beams, 1)
     image = image.reshape(data.shape)
     model = level * image
     residual = np.where(good, data - model, np.nan)
@@ -198,7 +231,9 @@ def _judge(
         inside = np.empty(square)
         for k in range(frames):
             centre = at[:, k].reshape(-1, 2)
-            inside[:, k] = circle_overlap(centre[:, 0], centre[:, 1], radii[r, k], size // 2).reshape(inside[:, k].shape)
+            inside[:, k] = circle_overlap(centre[:, 0], centre[:, 1], radii[r, k], size // 2).reshape(
+                inside[:, k].shape
+            )
         near = (1, 1, 1, _PLACE, _PLACE)
         found = uniform_filter(inside * charge.reshape(square), near, mode="constant").max(axis=(-2, -1)) * _PLACE**2
         flat = inside.reshape(data.shape)

@@ -139,7 +139,7 @@ def measure(
     if len(ring) != 2:
         raise InputError(f"annulus: {len(ring)} values found; expected the inner and the outer radius")
     hdu = list(hdu_of_beam) if hdu_of_beam is not None else [0] * beams
-    strips = list(sections) if sections is not None else [None] * beams
+    strips: list[Section | None] = list(sections) if sections is not None else [None] * beams
     if len(hdu) != beams or len(strips) != beams:
         raise InputError(f"beams: positions have {beams}, hdu_of_beam {len(hdu)}, sections {len(strips)}")
     if stars is None:
@@ -182,14 +182,19 @@ class _Work:
     def run(self) -> tuple[Measurement, _Cut]:
         """Sum everything, frame by frame; what spoils a frame is noted but not yet acted on."""
         shape, count = self.x.shape, len(self.radii)
+        each, planes = (count, *shape), [np.full(shape, np.nan) for _ in range(6)]
         result = Measurement(
-            self.radii,
-            *(np.full((count, *shape), np.nan) for _ in range(2)),
-            *(np.full(shape, np.nan) for _ in range(4)),
-            area=np.full((count, *shape), np.nan),
-            flags=np.zeros((count, *shape), np.int64),
-            fwhm=np.full(shape, np.nan),
-            ellipticity=np.full(shape, np.nan),
+            radii=self.radii,
+            flux=np.full(each, np.nan),
+            variance=np.full(each, np.nan),
+            sky=planes[0],
+            sky_err=planes[1],
+            sky_std=planes[2],
+            noise_ratio=planes[3],
+            area=np.full(each, np.nan),
+            flags=np.zeros(each, np.int64),
+            fwhm=planes[4],
+            ellipticity=planes[5],
         )
         half = window(float(self.radii.max()))
         size = (*shape, 2 * half + 1, 2 * half + 1)
@@ -209,9 +214,8 @@ class _Work:
 
     def _others(self, k: int, hdu: int) -> Others:
         beams = [b for b, own in enumerate(self.hdu) if own == hdu]
-        return Others(
-            self.stars.x[:, k, beams].T.ravel(), self.stars.y[:, k, beams].T.ravel(), np.tile(self.stars.radius, len(beams))
-        )
+        x, y = (place[:, k, beams].T.ravel() for place in (self.stars.x, self.stars.y))
+        return Others(x, y, np.tile(self.stars.radius, len(beams)))
 
     def _box(self, k: int, b: int, s: int) -> Pixels:
         x, y = self.x[s, k, b], self.y[s, k, b]

@@ -99,8 +99,8 @@ def annulus_sky(
 
     Notes
     -----
-    A plane is fitted to the pixels within `CLIP` standard deviations of it, iterated until the set is stable, and read at
-    the source: no gradient, incomplete annulus or one-sided mask biases it. The mean (not the median) keeps skewed
+    A plane is fitted to the pixels within `CLIP` standard deviations of it, iterated until the set is stable, and read
+    at the source: no gradient, incomplete annulus or one-sided mask biases it. The mean (not the median) keeps skewed
     noise unbiased; what the clip takes from the Poisson tail is put back (`SKEW_SHIFT`). The start is the median and
     the distance to the 16th percentile, which stars in the annulus reach least.
     """
