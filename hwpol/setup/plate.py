@@ -165,15 +165,14 @@ def _steps(values: Floats) -> tuple[float, float, float, int, float, bool] | Non
         places = np.unique(np.round((known - middle) / step).astype(int) % round(360 / step))
         turn = round(360 / step)
         if not 2 <= len(places) <= _MOST_POSITIONS or (len(places) == 2 and step > 45):
-            return None
-        # Where the plate has no full turn, it starts behind the widest gap.
+            continue
         gaps = np.diff(np.concatenate([places, [places[0] + turn]]))
+        if gaps.min() > 1:
+            continue
+        # Where the plate has no full turn, it starts behind the widest gap.
         first = places[0] if len(places) == turn or gaps.max() == gaps[-1] else places[int(np.argmax(gaps)) + 1]
         exact = abs(middle) < max(0.1, 2 * float(np.std(away)))
         start = (first * step + (0.0 if exact else middle)) % 360
-        regular = gaps.min() == 1 or len(places) == turn
-        if not regular:
-            return None
         return step, weight, float(start), len(places), float(np.ptp(away)), exact
     return None
 
@@ -325,12 +324,11 @@ def _measured(chosen: Reading) -> list[Finding]:
         )
         findings = [Finding("wave_plate.scale", scale, GUESSED, why)]
     if chosen.exact:
-        findings += _zero_and_sense(0.0, OPEN, "the positions are multiples of the step. ")
+        findings += _zero_and_sense(0.0, OPEN, " (the positions are multiples of the step)")
     else:
         start = round(chosen.start, 2)
         findings += _zero_and_sense(
-            start, GUESSED, f"the positions begin at {start:g}, no multiple of {chosen.step:g}, so this is taken as an "
-            "offset. "
+            start, GUESSED, f"; the positions begin at {start:g}, no multiple of {chosen.step:g}: taken for it"
         )  # fmt: skip
     if chosen.spread > 0.5:
         tolerance = round(min(max(1.0, 1.5 * chosen.spread), chosen.step / 4), 1)
@@ -345,8 +343,8 @@ def _zero_and_sense(zero: float, how: str, why: str) -> list[Finding]:
             "wave_plate.zero",
             zero,
             how,
-            f"{why}No header tells at which value the fast axis lies along +Q; what is left of it becomes part of the "
-            "zero angle fitted from polarised standards. Confirm with one",
+            f"no header tells at which value the fast axis lies along +Q{why}. What is left of it becomes part of the "
+            "zero angle fitted from polarised standards; confirm with one",
         ),
         Finding(
             "wave_plate.sense",
