@@ -104,7 +104,7 @@ class Calibration:
         Weights hold the measurement, the catalogue's errors (one per star, common to its visits) and an intrinsic
         scatter of the stars where they demand it. chi2 scales the covariance only where it is significantly large.
         """
-        from hwpol.correction.assemble import fit_calibration
+        from hwpol.correction.fitting.assemble import fit_calibration
 
         return fit_calibration(
             list(standards),

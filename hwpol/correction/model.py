@@ -95,9 +95,9 @@ def setting(
 
     limits = np.asarray(field_range, dtype=float)
     centre, half = limits.mean(axis=1), np.maximum(np.ptp(limits, axis=1) / 2, 1e-9)
-    scaled = [(spread(by_source(v), c) - c) / h for v, c, h in zip((x, y), centre, half, strict=True)]
+    across, along = ((spread(by_source(v), c) - c) / h for v, c, h in zip((x, y), centre, half, strict=True))
     days = spread(mjd, epoch) - epoch if np.isfinite(epoch) else np.zeros(shape)
-    return Setting(spread(chi, np.nan), spread(eta, np.nan), sense, *scaled, days)
+    return Setting(spread(chi, np.nan), spread(eta, np.nan), sense, across, along, days)
 
 
 def basis(names: tuple[str, ...], where: Setting) -> Complex:
@@ -126,7 +126,7 @@ def basis(names: tuple[str, ...], where: Setting) -> Complex:
     return np.array(rows)
 
 
-def real_pair(z: Complex) -> Array:
+def real_pair(z: ArrayLike) -> Array:
     """(q, u) of complex values on a new last axis."""
     return np.stack([np.real(z), np.imag(z)], axis=-1)
 
@@ -204,7 +204,8 @@ class FilterModel:
     def _along(self, direction: complex) -> float:
         places = [self.names.index(n) for n in AMPLITUDE]
         vector = np.array([direction.real, direction.imag]) / abs(direction)
-        return float(np.sqrt(max(vector @ self.covariance[np.ix_(places, places)] @ vector, 0.0)))
+        variance = float(vector @ self.covariance[np.ix_(places, places)] @ vector)
+        return float(np.sqrt(max(variance, 0.0)))
 
     @property
     def efficiency_err(self) -> float:

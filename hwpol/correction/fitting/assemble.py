@@ -10,9 +10,11 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from hwpol.correction.calibration import Calibration
-from hwpol.correction.fitting import SCATTER_ALARM, Data, Fit
+from hwpol.correction.fitting.least_squares import Data
+from hwpol.correction.fitting.one_model import Fit
+from hwpol.correction.fitting.robust import SCATTER_ALARM
+from hwpol.correction.fitting.selection import Selected, select
 from hwpol.correction.model import Array, FilterModel, setting
-from hwpol.correction.selection import Selected, select
 from hwpol.correction.standard import Solver, Standard
 from hwpol.errors import InputError
 from hwpol.flags import Flag
@@ -93,9 +95,9 @@ def fit_calibration(
 def _resolve(standard: Standard, calibration: Calibration | None, solver: Solver | None) -> Stokes:
     measured = standard.measured
     if hasattr(measured, "q"):
-        return measured  # type: ignore[no-any-return]
+        return measured
     if solver is None and hasattr(measured, "demodulated"):
-        return measured.demodulated(calibration)  # type: ignore[no-any-return]
+        return measured.demodulated(calibration)
     if solver is None:
         raise InputError(
             f"standard {standard.name or '(unnamed)'}: measured is {type(measured).__name__}, expected Stokes in the "
@@ -353,8 +355,8 @@ def _table(
     return rows
 
 
-def _pixel(scaled: float, limits: Array) -> float:
-    return float(limits.mean() + scaled * np.ptp(limits) / 2)
+def _pixel(scaled: float, limits: Array) -> Array:
+    return np.asarray(limits.mean() + scaled * np.ptp(limits) / 2)
 
 
 def _along(sky: Stokes, turn: complex = 1.0) -> float:

@@ -8,19 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import chi2 as chi2_distribution
 
-from hwpol.correction.fitting import (
-    AMPLITUDE_LIMIT,
-    DRIFT_ALARM,
-    IP_LIMIT,
-    Data,
-    Fit,
-    add_up,
-    fit_model,
-    free_frame,
-    linearise,
-    solve,
-    usable,
-)
+from hwpol.correction.fitting.least_squares import Data, add_up, free_frame, linearise, solve
+from hwpol.correction.fitting.one_model import AMPLITUDE_LIMIT, IP_LIMIT, Fit, fit_model, usable
 from hwpol.correction.model import AMPLITUDE, Array, Setting, basis, term_names
 
 #: Highest order tried for "best", and stars wanted for each term of a component.
@@ -29,6 +18,8 @@ HIGHEST_ORDER, STARS_PER_TERM = 4, 3
 FOLDS = 10
 #: Times (d) between which a drift may be sought: at least half an hour, within one night.
 DRIFT_SPAN = (0.02, 1.0)
+#: Chance below which a drift is taken to be demanded by the data.
+DRIFT_ALARM = 0.001
 #: Observations wanted before a drift is sought.
 DRIFT_OBSERVATIONS = 6
 #: A star's share of the cross-validation is cut at this many times the median share: bad standards are judged later.

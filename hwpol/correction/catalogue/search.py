@@ -14,14 +14,15 @@ Floors applied where a source gives no error (fractions and degrees):
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NamedTuple
 
 import numpy as np
 
-from hwpol.correction.bands import Curve, band_name, fit_curve, k_of
-from hwpol.correction.tables import StarTable, own_tables, read_table, star_key
+from hwpol.correction.catalogue.bands import Curve, band_name, fit_curve, k_of
+from hwpol.correction.catalogue.stars import Star, close_pairs, enter, separation
+from hwpol.correction.catalogue.tables import own_tables, read_table, star_key
 from hwpol.errors import ConfigError, InputError, MissingError
 
 P_FLOOR, THETA_FLOOR = 0.001, 0.5
@@ -78,33 +79,11 @@ class _Value(NamedTuple):
     rows: list[dict[str, Any]]
 
 
-@dataclass
-class _Star:
-    name: str
-    role: str
-    table: Path
-    users: bool
-    aliases: list[str] = field(default_factory=list)
-    rows: list[dict[str, Any]] = field(default_factory=list)
-    curves: list[dict[str, Any]] = field(default_factory=list)
-
-    def first(self, key: str) -> Any:
-        values = (row.get(key) for row in self.rows + self.curves)
-        return next((v for v in values if v not in (None, "") and v == v), "" if key == "variable" else float("nan"))
-
-
-def _separation(ra: float, dec: float, ra2: float, dec2: float) -> float:
-    """Angle (arcsec) between two positions in deg."""
-    a, d, a2, d2 = np.radians([ra, dec, ra2, dec2])
-    haversine = np.sin((d2 - d) / 2) ** 2 + np.cos(d) * np.cos(d2) * np.sin((a2 - a) / 2) ** 2
-    return float(np.degrees(2 * np.arcsin(np.sqrt(min(1.0, haversine)))) * 3600)
-
-
 @dataclass(frozen=True)
 class Catalogue:
     """Standard stars by name or position. Make one with `Catalogue.read`."""
 
-    stars: tuple[Any, ...]
+    stars: tuple[Star, ...]
     bands: tuple[dict[str, Any], ...]
     k_law: str = "whittet"
 
@@ -127,14 +106,14 @@ class Catalogue:
         k_of(1.0, k_law)
         own = own_tables()
         users = [read_table(path) for path in extra]
-        stars: list[_Star] = []
-        index: dict[str, _Star] = {}
+        stars: list[Star] = []
+        index: dict[str, Star] = {}
         problems: list[str] = []
         for table in [*users, *own]:
             for number, row in enumerate(table.rows, start=1):
                 if table.kind != "bands":
-                    problems += _enter(stars, index, table, number, row, table not in own)
-        problems += _close_pairs(stars)
+                    problems += enter(stars, index, table, number, row, table not in own)
+        problems += close_pairs(stars)
         if problems:
             raise ConfigError(problems, "standard-star tables")
         bands = tuple(row for table in [*users, *own] if table.kind == "bands" for row in table.rows)
@@ -161,7 +140,7 @@ class Catalogue:
             f"[filters] of the instrument file"
         )
 
-    def star(self, name: str = "", ra: float | None = None, dec: float | None = None) -> Any:
+    def star(self, name: str = "", ra: float | None = None, dec: float | None = None) -> Star | None:
         """Star of a name, else within 30 arcsec of a position (deg, ICRS); None where there is none.
 
         Raises
@@ -189,13 +168,13 @@ class Catalogue:
             )
         return near[0] if near else None
 
-    def _near(self, ra: float | None, dec: float | None) -> list[_Star]:
+    def _near(self, ra: float | None, dec: float | None) -> list[Star]:
         if ra is None or dec is None or not (np.isfinite(ra) and np.isfinite(dec)):
             return []
         found = []
         for star in self.stars:
             leeway = np.nan_to_num(star.first("pm")) * SEARCH_YEARS + np.nan_to_num(star.first("pos_err"))
-            if _separation(ra, dec, star.first("ra"), star.first("dec")) <= SEARCH_RADIUS + leeway:
+            if separation(ra, dec, star.first("ra"), star.first("dec")) <= SEARCH_RADIUS + leeway:
                 found.append(star)
         return found
 
@@ -242,7 +221,7 @@ class Catalogue:
             return None
         return self.entry(star, band, wavelength)
 
-    def entry(self, star: Any, band: str | None = None, wavelength: float | None = None) -> Entry | None:
+    def entry(self, star: Star, band: str | None = None, wavelength: float | None = None) -> Entry | None:
         """Value of a star (as `star` returns it) in a band; None where nothing usable is tabulated."""
         canonical, lam = self._wanted(band, wavelength)
         value = self._zero(star, canonical, lam) if star.role == "zero-polarised" else self._value(star, canonical, lam)
@@ -307,7 +286,7 @@ class Catalogue:
         near = [row for row in rows if lam is not None and abs(self._row_wavelength(row) - lam) <= SAME_WAVELENGTH]
         return near[0] if near else None
 
-    def _zero(self, star: _Star, band: str | None, lam: float | None) -> _Value | None:
+    def _zero(self, star: Star, band: str | None, lam: float | None) -> _Value | None:
         row = self._pick(star.rows, band, lam)
         if row is None:
             known = [row for row in star.rows if np.isfinite(row["p"])] or star.rows
@@ -319,7 +298,7 @@ class Catalogue:
             err = max(p, ZERO_LEAST) if np.isfinite(row["p"]) else ZERO_FLOOR * np.sqrt(2)
         return _Value(p, err, float("nan"), float("nan"), "tabulated", [row])
 
-    def _value(self, star: _Star, band: str | None, lam: float | None) -> _Value | None:
+    def _value(self, star: Star, band: str | None, lam: float | None) -> _Value | None:
         rows = [row for row in star.rows if np.isfinite(row["p"])]
         row = self._pick(rows, band, lam)
         if row is None and lam is None:
@@ -340,7 +319,7 @@ class Catalogue:
         theta, theta_err, more = self._angle(star, rows, lam)
         return None if np.isnan(theta) else _Value(p, p_err, theta, theta_err, method, [*used, *more])
 
-    def _curve(self, star: _Star, rows: list[dict[str, Any]]) -> tuple[Curve | None, list[dict[str, Any]], str]:
+    def _curve(self, star: Star, rows: list[dict[str, Any]]) -> tuple[Curve | None, list[dict[str, Any]], str]:
         placed = list({self._row_wavelength(r): r for r in reversed(rows) if self._row_wavelength(r) > 0}.values())
         if star.curves and len(placed) < FIT_BANDS:
             row = star.curves[0]
@@ -356,7 +335,7 @@ class Catalogue:
         lams = [self._row_wavelength(row) for row in placed]
         return fit_curve(lams, [r["p"] for r in placed], [_p_error(r) for r in placed], self.k_law), placed, "fitted"
 
-    def _angle(self, star: _Star, rows: list[dict[str, Any]], lam: float) -> tuple[float, float, list[dict[str, Any]]]:
+    def _angle(self, star: Star, rows: list[dict[str, Any]], lam: float) -> tuple[float, float, list[dict[str, Any]]]:
         """Angle (deg) at a wavelength, linear between the neighbouring tabulated bands, constant beyond them."""
         first = {self._row_wavelength(r): r for r in reversed(rows) if np.isfinite(r["theta"])}
         known = sorted((wave, row) for wave, row in first.items() if wave > 0) if first else []
@@ -384,48 +363,3 @@ def _theta_error(row: dict[str, Any]) -> float:
     if np.isfinite(row["theta_err"]) and row["theta_err"] > 0:
         return float(row["theta_err"])
     return float(max(np.degrees(_p_error(row) / max(row["p"], 1e-6)) / 2, THETA_FLOOR))
-
-
-def _enter(
-    stars: list[_Star], index: dict[str, _Star], table: StarTable, number: int, row: dict[str, Any], users: bool
-) -> list[str]:
-    """Add a row to its star; the problems it makes."""
-    names = [row["name"], *(n.strip() for n in row.get("aliases", "").split(";") if n.strip())]
-    keys = [star_key(n) for n in names]
-    role = "zero-polarised" if table.kind == "zero-polarised" else "polarised"
-    known = list({id(index[k]): index[k] for k in keys if k in index}.values())
-    place = f"{table.path.name}, row {number} ({row['name']})"
-    if len(known) > 1:
-        return [f"{place}: its names belong to {' and '.join(s.name for s in known)}; a name stands for one star"]
-    if known:
-        star = known[0]
-        if star.role != role:
-            if star.users and not users:
-                return []
-            return [f"{place}: listed as {role}, but {star.table.name} lists it as {star.role}; remove one of them"]
-    else:
-        star = _Star(row["name"], role, table.path, users)
-        stars.append(star)
-    star.aliases += [n for n, k in zip(names, keys, strict=True) if k not in index and n != star.name]
-    index.update(dict.fromkeys(keys, star))
-    (star.curves if table.kind == "curves" else star.rows).append(row)
-    return []
-
-
-def _close_pairs(stars: list[_Star]) -> list[str]:
-    """Find stars of two roles at one place under different names."""
-    zero = [s for s in stars if s.role == "zero-polarised"]
-    problems = []
-    for star in stars:
-        if star.role == "polarised":
-            for other in zero:
-                if abs(star.first("dec") - other.first("dec")) < 0.01 and star.users == other.users:
-                    gap = _separation(star.first("ra"), star.first("dec"), other.first("ra"), other.first("dec"))
-                    if gap < 5.0:
-                        problems.append(
-                            f"{star.name} ({star.table.name}, polarised) and {other.name} ({other.table.name}, "
-                            f"zero-polarised) are {gap:.1f} arcsec apart; remove one of them"
-                        )
-    return problems
-
-

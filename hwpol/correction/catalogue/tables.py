@@ -52,7 +52,7 @@ def star_key(name: str) -> str:
 
 def tables_root() -> Path:
     """Folder of the tables: beside the package in a source tree (an installed copy may be stale), else inside it."""
-    tree = Path(__file__).resolve().parents[2]
+    tree = Path(__file__).resolve().parents[3]
     if (tree / "pyproject.toml").is_file() and (tree / "calib_tables").is_dir():
         return tree / "calib_tables"
     inside = Path(str(files("hwpol"))) / "calib_tables"
@@ -96,7 +96,7 @@ def _column(table: Any, name: str) -> list[Any]:
         from astropy.units import Quantity
 
         values = Quantity(np.ma.filled(np.ma.asarray(column, dtype=float), np.nan), column.unit).to_value(_UNITS[name])
-    numbers = np.ma.filled(np.ma.asarray(values, dtype=float), np.nan)
+    numbers: Any = np.ma.filled(np.ma.asarray(values, dtype=float), np.nan)
     return [float("nan") if hidden else float(value) for value, hidden in zip(numbers, mask, strict=True)]
 
 

@@ -152,7 +152,8 @@ def fit_curve(wavelength: ArrayLike, p: ArrayLike, p_err: ArrayLike, law: str = 
         if np.max(np.abs(step)) < 1e-12:
             break
     peak = float(np.exp(state[1]))
-    return Curve(float(np.exp(state[0])), peak, float(k_of(peak, law)), np.linalg.inv(normal), law)
+    covariance = np.asarray(np.linalg.inv(normal), dtype=float)
+    return Curve(float(np.exp(state[0])), peak, float(k_of(peak, law)), covariance, law)
 
 
 def transfer(
