@@ -22,9 +22,10 @@ from scipy.stats import ncx2, qmc
 
 from hwpol.statistics.moments import Array
 from hwpol.statistics.posterior import FAR
-from hwpol.statistics.tables import LONGEST, ROUND, root
+from hwpol.statistics.tables import ROUND, root
 
 _SCALE = 2.0  # p0 = scale x / (1 - x): x in [0, 1] covers every signal
+_LONGEST = float(np.log(5.0))  # longest ellipse for which c(p0) is tabulated
 _DRAWS = 4096  # quasi-random draws behind c(p0): their error in probability is below 1e-3
 
 
@@ -73,7 +74,7 @@ def _sorted_distances() -> tuple[Array, Array, Array]:
     """Distances (x of p0, stretch, draw), sorted, of measured vectors from their own true circle."""
     cube = qmc.Sobol(3, scramble=True, rng=np.random.default_rng(20)).random(_DRAWS)
     angle, first, second = 0.5 * np.pi * cube[:, 0], ndtri(cube[:, 1]), ndtri(cube[:, 2])
-    x, stretch = np.linspace(0.0, 1.0, 21)[1:-1], np.linspace(0.0, LONGEST, 8)
+    x, stretch = np.linspace(0.0, 1.0, 21)[1:-1], np.linspace(0.0, _LONGEST, 9)
     p0 = (_SCALE * x / (1 - x))[:, None, None]
     major, minor = axes(stretch[None, :, None])
     found = distance(p0 * np.cos(angle) + major * first, p0 * np.sin(angle) + minor * second, p0, major, minor)
@@ -115,7 +116,7 @@ class Belt:
     def width(self, p0: Array, stretch: Array) -> Array:
         """Distance within which p0 is accepted; for ellipses longer than the table's, that of its longest."""
         x = p0 / (p0 + _SCALE)
-        return np.where(stretch < ROUND, self.circle(x), self.general.ev(x, np.minimum(stretch, LONGEST)))
+        return np.where(stretch < ROUND, self.circle(x), self.general.ev(x, np.minimum(stretch, _LONGEST)))
 
     def interval(self, p: Array, stretch: Array, tilt: Array) -> tuple[Array, Array]:
         """Ends of the interval of accepted p0."""

@@ -102,7 +102,7 @@ def test_line_of_equal_errors_follows_the_exact_road(kind: str) -> None:
     p = np.concatenate([np.random.default_rng(31).uniform(0, 10, 400), np.geomspace(10, 55, 40)])
     zero = np.zeros_like(p)
     for level in (0.6827, 0.95):
-        # Interpolation on 361 nodes; near its onset the lower end rises as a square root, hence 1e-4.
+        # Interpolation on 361 nodes; the lower end is steepest just above its onset.
         np.testing.assert_allclose(_ends(kind, level)(p, zero, zero), solve(kind, level, p, zero, zero), atol=1e-4)
 
 
@@ -113,9 +113,22 @@ def test_tables_of_general_errors_follow_the_exact_road(kind: str) -> None:
     rng, level = np.random.default_rng(32), 0.6827
     p, stretch, tilt = rng.uniform(0, 12, 1000), rng.uniform(0.01, LONGEST, 1000), rng.uniform(0, np.pi / 2, 1000)
     error = np.abs(np.array(_ends(kind, level)(p, stretch, tilt)) - np.array(solve(kind, level, p, stretch, tilt)))
-    # In units of the mean error: 0.03 at the very onset of the lower end for ratios near 3:1, far less elsewhere.
-    assert error.max() < 0.04
-    assert np.quantile(error, 0.98) < 0.005
+    # In units of the mean error. The worst is where the lower end of a long ellipse along the vector rises steeply,
+    # as its posterior is about to split into two peaks: there both ends are as good a choice.
+    assert error.max() < 0.05
+    assert np.quantile(error, 0.98) < 0.004
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("level", [0.6827, 0.95])
+def test_tabulated_bayesian_intervals_hold_their_content(level: float) -> None:
+    rng = np.random.default_rng(37)
+    p, stretch, tilt = rng.uniform(0, 12, 1000), rng.uniform(0.01, LONGEST, 1000), rng.uniform(0, np.pi / 2, 1000)
+    for kind in ("bayes", "bayes-qu"):
+        low, high = _ends(kind, level)(p, stretch, tilt)
+        posterior = Posterior(p, stretch, tilt, plane=kind == "bayes-qu")
+        content = posterior.cumulative(high) - posterior.cumulative(low)
+        np.testing.assert_allclose(content, level, rtol=0, atol=0.004)
 
 
 def test_long_ellipses_hold_their_content() -> None:
@@ -137,8 +150,8 @@ def test_intervals_are_ordered_and_scale(p: float, level: float, kind: str) -> N
     low, high = interval(p, 0.0, np.eye(2), level, kind)
     assert 0 <= low < high
     scaled = interval(0.0, 0.01 * p, 1e-4 * np.eye(2), level, kind)
-    # 1e-7: the square root at the onset makes 3e-8 of the rounding of p.
-    np.testing.assert_allclose(scaled, (0.01 * low, 0.01 * high), rtol=1e-7, atol=1e-8)
+    # The square root of p above the onset makes 1e-8 of the rounding of p.
+    np.testing.assert_allclose(scaled, (0.01 * low, 0.01 * high), rtol=1e-7, atol=1e-9)
 
 
 def test_circular_and_nearly_circular_agree() -> None:
