@@ -17,8 +17,7 @@ from functools import lru_cache
 
 import numpy as np
 from scipy.interpolate import CubicSpline, RectBivariateSpline
-from scipy.special import ndtri
-from scipy.stats import ncx2, qmc
+from scipy.special import chndtr, ndtri
 
 from hwpol.statistics.moments import Array
 from hwpol.statistics.posterior import FAR
@@ -72,6 +71,8 @@ def axes(stretch: Array) -> tuple[Array, Array]:
 @lru_cache(maxsize=1)
 def _sorted_distances() -> tuple[Array, Array, Array]:
     """Distances (x of p0, stretch, draw), sorted, of measured vectors from their own true circle."""
+    from scipy.stats import qmc  # slow to load, and needed for unequal errors alone
+
     cube = qmc.Sobol(3, scramble=True, rng=np.random.default_rng(20)).random(_DRAWS)
     angle, first, second = 0.5 * np.pi * cube[:, 0], ndtri(cube[:, 1]), ndtri(cube[:, 2])
     x, stretch = np.linspace(0.0, 1.0, 21)[1:-1], np.linspace(0.0, _LONGEST, 9)
@@ -98,7 +99,7 @@ class Belt:
 
         def surplus(c: Array) -> Array:
             high, low = p0[near] + c, np.maximum(p0[near] - c, 0.0)
-            return ncx2.cdf(high**2, 2, p0[near] ** 2) - ncx2.cdf(low**2, 2, p0[near] ** 2) - level
+            return chndtr(high**2, 2, p0[near] ** 2) - chndtr(low**2, 2, p0[near] ** 2) - level
 
         start = np.full(int(near.sum()), 0.5 * ends[1])
         width = np.full(x.size, ends[1])

@@ -15,8 +15,7 @@ from typing import Literal, get_args
 import numpy as np
 from numpy.typing import ArrayLike
 from scipy.interpolate import CubicSpline
-from scipy.special import i0e, i1e
-from scipy.stats import ncx2
+from scipy.special import chndtr, i0e, i1e
 
 from hwpol.errors import InputError
 from hwpol.statistics.moments import Array, geometry
@@ -63,7 +62,7 @@ def _mode_slope(p: Array, p0: Array) -> Array:
 
 
 def _above_median(p: Array, p0: Array) -> Array:
-    return 0.5 - ncx2.cdf(p**2, 2, p0**2)
+    return 0.5 - chndtr(p**2, 2, p0**2)
 
 
 def _likelihood_slope(p: Array, p0: Array) -> Array:

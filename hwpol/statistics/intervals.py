@@ -28,7 +28,7 @@ KINDS: tuple[str, ...] = get_args(Kind)
 # only grow by it, and the quadrature stays affordable.
 LONGEST_EXACT = float(np.log(30.0))
 _SCALE = 1.5
-_LINE, _BULK = 361, 41
+_LINE, _BULK = 361, 29
 _CHUNK = 2_000
 _CLIPPED = ("bayes", "frequentist")  # kinds whose lower end is zero below an onset, and grows from there
 
