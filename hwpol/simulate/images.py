@@ -53,17 +53,30 @@ class Layout:
 
 @dataclass(frozen=True)
 class Stars:
-    """The target (first) and the stars of its field: arcsec east and north, rates and q, u, v by filter."""
+    """The target (first) and the stars of its field: arcsec east and north, rates and q, u, v by filter.
+
+    `p_rate`, `theta_rate` (deg) per hour are the target's own.
+    """
 
     east: NDArray[np.float64]
     north: NDArray[np.float64]
     rate: dict[str, NDArray[np.float64]]
     polarisation: dict[str, NDArray[np.float64]]
+    p_rate: float = 0.0
+    theta_rate: float = 0.0
 
-    def stokes(self, filter_name: str) -> NDArray[np.float64]:
+    def light(self, filter_name: str, hours: float) -> NDArray[np.float64]:
+        """q, u, v on the sky `hours` after the start of the night, shape (source, 3)."""
+        light = self.polarisation[filter_name].copy()
+        z = complex(*light[0, :2])
+        turned = (abs(z) + self.p_rate * hours) * np.exp(1j * (np.angle(z) + 2 * np.deg2rad(self.theta_rate * hours)))
+        light[0, :2] = turned.real, turned.imag
+        return light
+
+    def stokes(self, filter_name: str, hours: float) -> NDArray[np.float64]:
         """I, Q, U, V on the sky, shape (source, 4), electrons per second."""
         rate = self.rate[filter_name][:, None]
-        return np.concatenate([rate, rate * self.polarisation[filter_name]], axis=1)
+        return np.concatenate([rate, rate * self.light(filter_name, hours)], axis=1)
 
 
 def stars_of(scenario: Scenario, target: Target, chi: float) -> Stars:
@@ -85,7 +98,12 @@ def stars_of(scenario: Scenario, target: Target, chi: float) -> Stars:
     total = sum(rate.values())
     order = np.append(0, 1 + np.argsort(-np.asarray(total)[1:], kind="stable"))
     return Stars(
-        east[order], north[order], {n: r[order] for n, r in rate.items()}, {n: z[order] for n, z in light.items()}
+        east[order],
+        north[order],
+        {n: r[order] for n, r in rate.items()},
+        {n: z[order] for n, z in light.items()},
+        target.p_rate,
+        target.theta_rate,
     )
 
 
@@ -232,14 +250,14 @@ def starlight(
     """
     nx, ny = scenario.array.shape
     images = [np.zeros((ny, nx)) for _ in layout.extensions]
-    train, air = scenario.train(one.filter), scenario.atmosphere
+    train, air = scenario.train(one.filter, one.hours), scenario.atmosphere
     x, y = positions(scenario, layout, one, stars, elapsed)
     eta = 0.0 if np.isnan(one.eta) else one.eta
     xs, ys = scaled(scenario, x[:, 0], y[:, 0])
     gain = 0.5 * np.asarray(train.throughput)
     rows = train.rows(one.psi, one.chi, eta, xs, ys)
     seconds = one.seconds * one.transparency
-    electrons = seconds * gain * np.einsum("sbi,si->sb", rows, stars.stokes(one.filter))
+    electrons = seconds * gain * np.einsum("sbi,si->sb", rows, stars.stokes(one.filter, one.hours))
     centre = train.rows(one.psi, one.chi, eta)
     for b, area in enumerate(layout.area):
         window = images[layout.hdu[b]][area.y0 : area.y1, area.x0 : area.x1]
@@ -274,7 +292,7 @@ def lamplight(scenario: Scenario, layout: Layout, one: Exposure, block: Block) -
     """Expected electrons of a flat-field frame: an even lamp, polarised in the instrument frame."""
     nx, ny = scenario.array.shape
     images = [np.zeros((ny, nx)) for _ in layout.extensions]
-    train = scenario.train(one.filter)
+    train = scenario.train(one.filter, one.hours)
     # The lamp turns with the instrument: seen from the sky side at chi = 0 it is (p, sense theta).
     twice = np.deg2rad(2 * train.sense * block.theta)
     light = np.array([1.0, block.p * np.cos(twice), block.p * np.sin(twice), 0.0])

@@ -26,8 +26,9 @@ def child(seed: int, *key: int) -> np.random.Generator:
 class Exposure:
     """One frame as it truly was.
 
-    `start` MJD UTC; angles deg; `psi_header` what the header will say (NaN
-    without a plate), `psi` the truth; `fwhm` pixels; `shift` pixels, the
+    `start` MJD UTC; `hours` from the start of the night to mid-exposure;
+    angles deg; `psi_header` what the header will say (NaN without a plate),
+    `psi` the truth; `fwhm` pixels; `shift` pixels, the
     plate's wobble included; `visit`, `cycle`, `position` from 1, -1 for none;
     `faults` pairs of kind and amount, with the beam for hits.
     """
@@ -39,6 +40,7 @@ class Exposure:
     filter: str = ""
     seconds: float = 0.0
     start: float = 0.0
+    hours: float = 0.0
     psi_header: float = np.nan
     psi: float = np.nan
     chi: float = 0.0
@@ -92,20 +94,29 @@ def _schedule(scenario: Scenario) -> Iterator[Exposure]:
     first = float(Time(scenario.start, scale="utc").mjd)
     clock, pointed, number = 0.0, "", 0
     for index, block in enumerate(scenario.blocks):
-        if block.at is not None:
-            clock = max(clock, block.at * 3600.0)
+        earliest = 0.0 if block.at is None else block.at * 3600.0
         for target, filter_name, cycle, position, angle in _order(block):
             if target and pointed and target != pointed:
                 clock += scenario.slew
+            clock = max(clock, earliest)
             pointed = target or pointed
-            if scenario.instrument.wave_plate is None:
-                angle = np.nan
             number += 1
             seconds = 0.0 if block.kind == "bias" else in_filter(block.exposure, filter_name)
+            psi = np.nan if scenario.instrument.wave_plate is None else angle
             yield Exposure(
-                number=number, kind=block.kind, block=index, target=target, filter=filter_name, seconds=seconds,
-                start=first + clock / 86400.0, psi=angle, psi_header=angle, cycle=cycle, position=position,
-            )  # fmt: skip
+                number=number,
+                kind=block.kind,
+                block=index,
+                target=target,
+                filter=filter_name,
+                seconds=seconds,
+                start=first + clock / 86400.0,
+                hours=(clock + seconds / 2) / 3600.0,
+                psi=psi,
+                psi_header=psi,
+                cycle=cycle,
+                position=position,
+            )
             clock += seconds + scenario.overhead
 
 
@@ -185,7 +196,7 @@ def _weather(scenario: Scenario, exposures: list[Exposure]) -> list[Exposure]:
     from scipy.special import ndtr
 
     air = scenario.atmosphere
-    minutes = np.array([(one.middle - exposures[0].start) * 1440.0 for one in exposures])
+    minutes = np.array([one.hours * 60.0 for one in exposures])
     seeing = air.seeing * np.exp(air.seeing_change * _walk(child(scenario.seed, WALKS, 0), minutes, air.seeing_time))
     clear = 1.0 - air.clouds * ndtr(_walk(child(scenario.seed, WALKS, 1), minutes, air.cloud_time))
     found = []

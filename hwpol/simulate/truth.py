@@ -31,7 +31,7 @@ class Measured:
 
 def observed(scenario: Scenario, one: Exposure, stokes: Image, x: Image, y: Image) -> NDArray[np.complex128]:
     """q + i u in front of the plate, instrument frame, of every source: what analysers there would show."""
-    ideal = replace(scenario.train(one.filter), analyser=(0.0, 90.0, 45.0, 135.0), throughput=(1.0,) * 4)
+    ideal = replace(scenario.train(one.filter, one.hours), analyser=(0.0, 90.0, 45.0, 135.0), throughput=(1.0,) * 4)
     eta = 0.0 if np.isnan(one.eta) else one.eta
     xs, ys = scaled(scenario, x[:, None], y[:, None])
     f = simulate_fluxes(stokes, ideal, np.nan, chi=one.chi, eta=eta, x=xs, y=ys)[:, 0]
@@ -49,7 +49,7 @@ def source_table(
 ) -> Table:
     """A row per source, filter and visit.
 
-    q, u, v, p, theta: on the sky. q_inst, u_inst: as observed in the
+    q, u, v, p, theta: on the sky, q, u, v the mean of the frames. q_inst, u_inst: as observed in the
     instrument frame, mean of the frames. ip_q, ip_u: at the source in the
     first frame. rate: electrons/s above clouds, flux: in all beams together,
     mean of the frames. x, y: first beam, first frame. edge: smallest distance
@@ -61,16 +61,17 @@ def source_table(
     for visit in visits:
         mine = [(one, value) for one, value in zip(exposures, measured, strict=True) if one.visit == visit]
         one, value = mine[0]
-        target, train, field = scenario.target(one.target), scenario.train(one.filter), stars[one.target]
-        stokes = field.stokes(one.filter)
-        z = np.mean([observed(scenario, o, stokes, v.x[:, 0], v.y[:, 0]) for o, v in mine], axis=0)
+        target, train, field = scenario.target(one.target), scenario.train(one.filter, one.hours), stars[one.target]
+        z = np.mean(
+            [observed(scenario, o, field.stokes(o.filter, o.hours), v.x[:, 0], v.y[:, 0]) for o, v in mine], axis=0
+        )
         flux = np.mean([v.electrons.sum(axis=1) / o.seconds for o, v in mine], axis=0)
         edge = np.min([_edge(layout, v.x, v.y) for _, v in mine], axis=0)
         nearest = _nearest(layout, value.x, value.y)
         xs, ys = scaled(scenario, value.x[:, 0], value.y[:, 0])
         ip = train.ip_at(one.chi, 0.0 if np.isnan(one.eta) else one.eta, xs, ys)
         cosine = np.cos(np.deg2rad(target.dec))
-        q, u, v = field.polarisation[one.filter].T
+        q, u, v = np.mean([field.light(o.filter, o.hours) for o, _ in mine], axis=0).T
         for s in range(len(q)):
             rows.append({
                 "target": one.target, "source": s, "role": target.role if s == 0 else "science", "filter": one.filter,
@@ -128,13 +129,15 @@ def catalogue_tables(scenario: Scenario, exposures: tuple[Exposure, ...]) -> dic
     for number, target in enumerate(scenario.targets):
         if target.role == "science":
             continue
-        rng = child(scenario.seed, CATALOGUE, number)
+        seed = scenario.seed if scenario.catalogue_seed is None else scenario.catalogue_seed
+        rng = child(seed, CATALOGUE, number)
         for filter_name in scenario.filters:
             q, u, _ = target.stokes(filter_name)
             p, theta = np.hypot(q, u), np.rad2deg(np.arctan2(u, q)) / 2
             draw = rng.standard_normal(2)
             if target.role == "polarised":
                 p, theta = abs(p + target.p_err * draw[0]), theta + target.theta_err * draw[1]
+            p, theta = p + target.catalogue_shift[0], theta + target.catalogue_shift[1]
             if (target.name, filter_name) not in seen:
                 continue
             band = scenario.instrument.filters.get(filter_name)

@@ -176,6 +176,9 @@ TARGET = Table(
         Key("vmag", number(), "V magnitude for the catalogue.", 12.0),
         Key("p_err", _positive, "Error of p in the catalogue; the catalogue value is drawn with it.", 0.0003),
         Key("theta_err", _positive, "Error of theta in the catalogue; the catalogue value is drawn with it.", 0.2),
+        Key("catalogue_shift", _pair, "What the catalogue is wrong by beyond its errors: p, theta.", [0.0, 0.0]),
+        Key("p_rate", number(), "Change of p per hour, from the start of the night.", 0.0),
+        Key("theta_rate", number(), "Change of theta per hour, from the start of the night, deg.", 0.0),
         Key("xy", _pair, "Pixel it is pointed to; default the middle of the first beam's area."),
         Key("motion", _pair, "Arcsec per hour east and north, against the telescope's tracking.", [0.0, 0.0]),
         Key("companion", ListOf(SOURCE, "tables [[target.companion]]"), "Stars of its field.", []),
@@ -260,6 +263,7 @@ FILTER = Table(
     keys=(
         Key("ip", _stokes_pair, "Instrumental polarisation fixed in the instrument, as observed.", [0.0, 0.0]),
         Key("ip_tel", _stokes_pair, "The part turning with the telescope.", [0.0, 0.0]),
+        Key("ip_drift", _stokes_pair, "Change of ip per hour, from the start of the night.", [0.0, 0.0]),
         Key("ip_field", _field_terms, "Field-dependent part, x and y scaled to [-1, 1].", {}),
         Key("efficiency", number(above=0, at_most=1), "What remains beside the retardance.", 1.0),
         Key("zero_angle", number(above=-90, at_most=90), "Zero angle.", 0.0),
@@ -318,6 +322,8 @@ SCENARIO = Table(
     keys=(
         Key("name", words(), "Name of the night.", required=True),
         Key("seed", integer(at_least=0), "Seed of everything random.", required=True),
+        Key("catalogue_seed", integer(at_least=0), "Seed of the errors of catalogue values, where several nights "
+            "share a catalogue; default the seed."),
         Key("start", Single("a date and time, UTC", _parse_start), "Start of the night, UTC.", required=True),
         Key("overhead", _not_negative, "Seconds between frames.", 15.0),
         Key("slew", _not_negative, "Seconds to another target.", 60.0),

@@ -3,16 +3,16 @@
 A scenario names what is true; the instrument file in it says how headers
 express it. Its sections (all keys, their defaults and meaning: `known_keys`)::
 
-    name, seed, start, overhead, slew
+    name, seed, catalogue_seed, start, overhead, slew
     instrument = "file.toml"      # or [instrument] with the content of an instrument file
     [array]        shape, bias, dark, pixel_response, cosmic_rays, ...   the detector's truth
     [optics]       plate_diattenuation, setting_noise, wobble, ...
     [[beam]]       shift, scale, quadratic, fwhm, throughput             how beams depart from the file
-    [filters.V]    ip, ip_tel, ip_field, efficiency, zero_angle, retardance, sky
+    [filters.V]    ip, ip_tel, ip_drift, ip_field, efficiency, zero_angle, retardance, sky
     [atmosphere]   seeing, seeing_change, beta, clouds, ...
     [guiding]      drift, jitter, pointing
     [sky]          p, theta, gradient, change
-    [[target]]     name, ra, dec, role, rate, p, theta (or q, u), v, xy, motion, ...
+    [[target]]     name, ra, dec, role, rate, p, theta (or q, u), v, xy, motion, theta_rate, ...
     [[target.companion]]  [target.field]  [target.nebula]
     [[block]]      kind, targets, filters, angles, cycles, exposure, ...  exposures, in order
     [[fault]]      kind, frames, amount, beam                            what goes wrong
@@ -59,6 +59,7 @@ class Scenario:
 
     name: str
     seed: int
+    catalogue_seed: int | None
     start: str
     overhead: float
     slew: float
@@ -113,8 +114,8 @@ class Scenario:
         """The target of this name."""
         return next(target for target in self.targets if target.name == name)
 
-    def train(self, filter_name: str) -> Train:
-        """The optical train in one filter, the truth throughout."""
+    def train(self, filter_name: str, hours: float = 0.0) -> Train:
+        """The optical train in one filter, the truth throughout, `hours` after the start."""
         truth = self.filters[filter_name]
         plate = self.instrument.wave_plate
         nominal = 180.0 if plate is None else plate.retardance_of(filter_name)
@@ -126,7 +127,7 @@ class Scenario:
             ),
             retardance=nominal if truth.retardance is None else truth.retardance,
             plate_diattenuation=self.optics.plate_diattenuation,
-            ip=truth.ip,
+            ip=truth.ip + hours * truth.ip_drift,
             ip_tel=truth.ip_tel,
             ip_field=truth.ip_field,
             efficiency=truth.efficiency,

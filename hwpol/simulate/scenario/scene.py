@@ -98,6 +98,9 @@ class Target(Light):
     vmag: float = 12.0
     p_err: float = 0.0003
     theta_err: float = 0.2
+    catalogue_shift: tuple[float, float] = (0.0, 0.0)
+    p_rate: float = 0.0
+    theta_rate: float = 0.0
     xy: tuple[float, float] | None = None
     motion: tuple[float, float] = (0.0, 0.0)
     companion: tuple[Source, ...] = ()
@@ -180,6 +183,7 @@ class FilterTruth:
 
     ip: complex = 0j
     ip_tel: complex = 0j
+    ip_drift: complex = 0j
     ip_field: Mapping[str, complex] = field(default_factory=dict)
     efficiency: float = 1.0
     zero_angle: float = 0.0
