@@ -91,12 +91,12 @@ def circle_overlap(fx: Floats, fy: Floats, radius: float, half: int) -> Floats:
     ex = np.clip(edges - np.asarray(fx)[:, None], -radius, radius)
     ey = np.clip(edges - np.asarray(fy)[:, None], -radius, radius)
     ax, ay = np.abs(ex), np.abs(ey)
-    crossing = np.sqrt(radius**2 - ay**2)
-    beyond = ay * crossing - _under_circle(crossing, radius)
+    crossing = np.sqrt((radius - ay) * (radius + ay))
+    beyond = ay * crossing - _under_circle(crossing, ay, radius)
     corner = np.where(
         ax[:, None, :] <= crossing[:, :, None],
         ay[:, :, None] * ax[:, None, :],
-        beyond[:, :, None] + _under_circle(ax, radius)[:, None, :],
+        beyond[:, :, None] + _under_circle(ax, np.sqrt((radius - ax) * (radius + ax)), radius)[:, None, :],
     )
     corner *= np.sign(ex)[:, None, :]
     corner *= np.sign(ey)[:, :, None]
@@ -104,9 +104,9 @@ def circle_overlap(fx: Floats, fy: Floats, radius: float, half: int) -> Floats:
     return strips[:, :, 1:] - strips[:, :, :-1]
 
 
-def _under_circle(x: Floats, radius: float) -> Floats:
-    """Integral of sqrt(r^2 - t^2) from 0 to x."""
-    return 0.5 * (x * np.sqrt(np.maximum(radius**2 - x**2, 0.0)) + radius**2 * np.arcsin(np.minimum(x / radius, 1.0)))
+def _under_circle(x: Floats, h: Floats, radius: float) -> Floats:
+    """Integral of h = sqrt(r^2 - t^2) from 0 to x, with h(x) given: its arc is then exact at both ends."""
+    return 0.5 * (x * h + radius**2 * np.arctan2(x, h))
 
 
 def gather(

@@ -74,7 +74,7 @@ def shapes(data: Floats, dx: Floats, dy: Floats, *, start: float = 3.0) -> Shape
     alive = np.isfinite(gx[:, 0]) & np.isfinite(gy[:, 0]) & np.isfinite(stamps).all(axis=1)
     active = np.flatnonzero(alive)
     done = np.zeros(count, np.bool_)
-    largest = (size / 2.0) ** 2
+    largest = (0.75 * size / SIGMA_TO_FWHM) ** 2  # wider images than that are the stamp, not the star
     for _ in range(_PASSES):
         if not len(active):
             break

@@ -146,7 +146,7 @@ def _sky_block(
     level = (plane * at).sum(axis=1)
     square = std**2
     with np.errstate(divide="ignore", invalid="ignore"):
-        level = level + SKEW_SHIFT * np.where(square > 0, np.maximum(level, 0.0) / square, 0.0)
+        level = level + SKEW_SHIFT * np.where(square > 0, np.clip(level / square, 0.0, 1.0), 0.0)
         error = std * np.sqrt((at * (inverse @ at[:, :, None])[:, :, 0]).sum(axis=1))
         ratio = square / (np.where(keep, variance, 0.0).sum(axis=1) / npix)
         change = 2.0 * limits[1] * np.hypot(plane[:, 1], plane[:, 2])
