@@ -49,7 +49,8 @@ def source_table(
 ) -> Table:
     """A row per source, filter and visit.
 
-    q, u, v, p, theta: on the sky, q, u, v the mean of the frames. q_inst, u_inst: as observed in the
+    q, u, v, p, theta: on the sky, q, u, v the mean of the frames; of the star
+    alone where a nebula surrounds it. q_inst, u_inst: as observed in the
     instrument frame, mean of the frames. ip_q, ip_u: at the source in the
     first frame. rate: electrons/s above clouds, flux: in all beams together,
     mean of the frames. x, y: first beam, first frame. edge: smallest distance
