@@ -53,24 +53,27 @@ def observed_from_instrument(z: ArrayLike, ip: ArrayLike, amplitude: ArrayLike) 
     the second order of a weak diattenuator in front of the plate.
     """
     value, offset, gain = (np.asarray(a, dtype=complex) for a in (z, ip, amplitude))
-    return np.asarray((offset + gain * value) / (1 + np.real(np.conj(offset / gain) * value)))
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+        return np.asarray((offset + gain * value) / (1 + np.real(np.conj(offset / gain) * value)))
 
 
 def observed_slopes(z: ArrayLike, ip: ArrayLike, amplitude: ArrayLike) -> tuple[Complex, Complex]:
     """Slopes (a, b) of `observed_from_instrument`: d z_observed = a dz + b conj(dz)."""
     value, offset, gain = (np.asarray(a, dtype=complex) for a in (z, ip, amplitude))
-    tilt = offset / gain
-    below = 1 + np.real(np.conj(tilt) * value)
-    observed = (offset + gain * value) / below
-    return np.asarray((gain - observed * np.conj(tilt) / 2) / below), np.asarray(-observed * tilt / (2 * below))
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+        tilt = offset / gain
+        below = 1 + np.real(np.conj(tilt) * value)
+        observed = (offset + gain * value) / below
+        return np.asarray((gain - observed * np.conj(tilt) / 2) / below), np.asarray(-observed * tilt / (2 * below))
 
 
 def instrument_from_observed(z: ArrayLike, ip: ArrayLike, amplitude: ArrayLike) -> Complex:
     """True z in the instrument frame from the observed one; the exact inverse of `observed_from_instrument`."""
     value, offset, gain = (np.asarray(a, dtype=complex) for a in (z, ip, amplitude))
-    tilt = np.conj(offset / gain)
-    share = np.real(tilt * (value - offset) / gain) / (1 - np.real(tilt * value / gain))
-    return np.asarray((value - offset + value * share) / gain)
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+        tilt = np.conj(offset / gain)
+        share = np.real(tilt * (value - offset) / gain) / (1 - np.real(tilt * value / gain))
+        return np.asarray((value - offset + value * share) / gain)
 
 
 def real_slopes(a: ArrayLike, b: ArrayLike) -> Array:

@@ -7,17 +7,24 @@ half their difference is zero for any source, gain and transparency, and has the
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
 from hwpol.demodulation.demodulate import fit_counts
 from hwpol.fluxes import Fluxes
+from hwpol.stokes import ROTATION_LIMIT, carry, instrument_from_sky, real_slopes, sky_slopes
 
 Array = NDArray[np.float64]
 
 
-def half_turn_null(fluxes: Fluxes, *, gain: str = "visit") -> tuple[Array, Array]:
+def half_turn_null(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None) -> tuple[Array, Array]:
     """Null (q, u) from positions psi mod 180 below and above 90 deg, instrument frame.
+
+    With a calibration the halves are solved for the sky, so that a field that turns does not make a null; the
+    difference is brought back to the instrument frame at the mean angle. Without one a field that turns by more
+    than 1 deg has no null.
 
     Returns
     -------
@@ -26,20 +33,29 @@ def half_turn_null(fluxes: Fluxes, *, gain: str = "visit") -> tuple[Array, Array
         NaN where the halves do not both determine q and u.
     """
     psi = np.mod(fluxes.wave_plate + 1e-6, 180.0)
-    return _null(fluxes, psi < 90.0, gain)
+    return _null(fluxes, psi < 90.0, gain, calibration)
 
 
-def time_null(fluxes: Fluxes, *, gain: str = "visit") -> tuple[Array, Array]:
+def time_null(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None) -> tuple[Array, Array]:
     """Null (q, u) from the first half of the cycles against the second; as `half_turn_null`."""
     cycles = np.unique(fluxes.cycle)
-    return _null(fluxes, np.isin(fluxes.cycle, cycles[: len(cycles) // 2]), gain)
+    return _null(fluxes, np.isin(fluxes.cycle, cycles[: len(cycles) // 2]), gain, calibration)
 
 
-def _null(fluxes: Fluxes, first: NDArray[np.bool_], gain: str) -> tuple[Array, Array]:
+def _null(fluxes: Fluxes, first: NDArray[np.bool_], gain: str, calibration: Any) -> tuple[Array, Array]:
     sources = fluxes.shape[0]
     if not first.any() or first.all():
         return np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
-    one = fit_counts(fluxes.take_frames(first), gain=gain).stokes
-    other = fit_counts(fluxes.take_frames(~first), gain=gain).stokes
-    z = np.stack([one.q - other.q, one.u - other.u], axis=-1) / 2
-    return z, (one.random_covariance + other.random_covariance) / 4
+    one = fit_counts(fluxes.take_frames(first), gain=gain, calibration=calibration).stokes
+    other = fit_counts(fluxes.take_frames(~first), gain=gain, calibration=calibration).stokes
+    difference = (one.z - other.z) / 2
+    covariance = (one.random_covariance + other.random_covariance) / 4
+    chi = one.position_angle
+    if calibration is None:
+        if np.ptp(fluxes.position_angle) > ROTATION_LIMIT:
+            return np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
+    else:
+        difference = instrument_from_sky(difference, chi, fluxes.sense)
+        back = np.linalg.inv(real_slopes(*sky_slopes(chi, fluxes.sense)))
+        covariance = carry(covariance, back)
+    return np.stack([difference.real, difference.imag], axis=-1), covariance

@@ -53,7 +53,12 @@ class RadiusChoice:
 
 
 def choose_radius(
-    curve: list[Fluxes], multiples: Array, *, method: str = "least-squares", gain: str = "visit"
+    curve: list[Fluxes],
+    multiples: Array,
+    foreign: Array | None = None,
+    *,
+    method: str = "least-squares",
+    gain: str = "visit",
 ) -> RadiusChoice:
     """Choose among aperture radii by the source's own q and u.
 
@@ -63,6 +68,8 @@ def choose_radius(
         One source, a Fluxes for each radius, smallest first.
     multiples : ndarray, shape (R,)
         The radii in fwhm.
+    foreign : ndarray, shape (R,), optional
+        Error of q that the light of other stars can make at each radius.
 
     Notes
     -----
@@ -81,22 +88,29 @@ def choose_radius(
     covariance = np.asarray([v[2] for v in values])
     errors = np.sqrt(np.einsum("rii->ri", covariance))
     usable = np.isfinite(q) & np.isfinite(u)
-    first = _first(multiples, errors, usable)
+    alien = np.zeros(len(multiples)) if foreign is None else np.nan_to_num(foreign)
+    first = _first(multiples, errors, usable, alien)
+    # Where other stars come in, q and u follow them and not the source: no plateau is looked for out there.
+    usable &= alien <= np.maximum(1.5 * alien[first], 0.3 * float(np.max(errors[first])))
     number, plateau = first, False
     for r in range(first, len(multiples)):
-        if usable[r] and not _sloped(q, u, covariance, _members(multiples, usable, r)):
+        if (
+            usable[r]
+            and len(_members(multiples, usable, r)) > 1
+            and not _sloped(q, u, covariance, _members(multiples, usable, r))
+        ):
             number, plateau = r, True
             break
     drift = _drift(q, u, errors, _members(multiples, usable, number))
     return RadiusChoice(number, drift, plateau, q, u, errors[:, 0], errors[:, 1])
 
 
-def _first(multiples: Array, errors: Array, usable: NDArray[np.bool_]) -> int:
+def _first(multiples: Array, errors: Array, usable: NDArray[np.bool_], alien: Array) -> int:
     """The smallest radius to consider: at 1.5 fwhm, or less where noise outweighs what seeing can do."""
     known = sorted(SEEING_CHANGE)
     systematic = np.interp(multiples, known, [SEEING_CHANGE[k] for k in known])
     noise = np.sqrt(np.sum(errors**2, axis=1) / 2)
-    cost = np.where(usable, np.hypot(noise, systematic), np.inf)
+    cost = np.where(usable, np.hypot(np.hypot(noise, systematic), alien), np.inf)
     candidates = np.flatnonzero(multiples <= SAFE + 1e-9)
     if not np.isfinite(cost[candidates]).any():
         return int(np.argmin(cost)) if np.isfinite(cost).any() else 0

@@ -124,17 +124,17 @@ def _solve(config: NightConfig, visit: VisitResult, calibration: Calibration | N
 
 
 def with_drift(solution: VisitSolution, drift: Array, calibration: Calibration | None) -> VisitSolution:
-    """Add what q and u drift over the plateau of radii to the error of the visit's first target."""
+    """Add the systematic errors of the measurement, shape (S, 2), to the random ones."""
     if not np.any(drift > 0):
         return solution
-    extra = np.diag(np.asarray(drift) ** 2)
+    extra = np.einsum("si,ij->sij", np.asarray(drift) ** 2, np.eye(2))
     stokes = solution.stokes
     if calibration is not None:
         model = calibration.model(stokes.filter)
         slopes = real_slopes(*sky_slopes(stokes.position_angle, stokes.sense))
         extra = carry(extra, slopes.reshape(-1, 2, 2)[0]) / model.efficiency**2
     covariance = stokes.covariance.copy()
-    covariance[0, :2, :2] += extra
+    covariance[:, :2, :2] += extra
     return replace(solution, stokes=replace(stokes, covariance=covariance))
 
 

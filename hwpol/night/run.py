@@ -168,7 +168,7 @@ class Night:
         notes = [*calibrator.warnings, *(role.note for listed in roles.values() for role in listed if role.note)]
         items = tuple(
             Measured(
-                name, result.task_number, result.fluxes.take_sources([s]), roles[result.task_number][s], result.drift
+                name, result.task_number, result.fluxes.take_sources([s]), roles[result.task_number][s], result.drift[s]
             )
             for result in results
             for s, name in enumerate(result.names)

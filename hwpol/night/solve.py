@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hwpol.demodulation import demodulate, fit_counts, half_turn_null, photon_covariance, time_null
+from hwpol.demodulation import demodulate, fit_counts, half_turn_null, photon_covariance
 from hwpol.errors import InputError
 from hwpol.flags import Flag
 from hwpol.fluxes import Fluxes
@@ -96,7 +96,7 @@ def solve_visit(
     covariance = stokes.covariance.copy()
     covariance[..., :2, :2] = np.where(repeats[:, None, None], adopted, count)
 
-    null, null_covariance, photon, ratio, ratio_err = _diagnose(used, gain)
+    null, null_covariance, photon, ratio, ratio_err = _diagnose(used, gain, calibration)
     flags = stokes.flags.copy()
     complete = _complete_cycles(fluxes)
     flags |= np.where(complete.all(), 0, int(Flag.INCOMPLETE_CYCLE))
@@ -105,8 +105,7 @@ def solve_visit(
     flags |= np.where(repeats, 0, int(Flag.NO_REPEATS))
     with np.errstate(invalid="ignore"):
         flags |= np.where(_null_probability(null, null_covariance) < DOUBT, int(Flag.NULL_FAILED), 0)
-        trend, trend_covariance = time_null(used, gain=gain)
-        flags |= np.where(_null_probability(trend, trend_covariance) < DOUBT, int(Flag.CYCLE_VARIABLE), 0)
+        flags |= np.where(_trend(cycles, solvable & ~set_aside) < DOUBT, int(Flag.CYCLE_VARIABLE), 0)
     dof = np.where(repeats, combined.dof, np.broadcast_to(stokes.dof, repeats.shape)).astype(int)
     return VisitSolution(
         stokes=replace(stokes, covariance=covariance, flags=flags),
@@ -127,15 +126,27 @@ def solve_visit(
     )
 
 
-def _diagnose(fluxes: Fluxes, gain: str) -> tuple[Array, Array, Array, Array, Array]:
+def _diagnose(fluxes: Fluxes, gain: str, calibration: Any) -> tuple[Array, Array, Array, Array, Array]:
     sources, _, beams = fluxes.shape
     try:
         solution = fit_counts(fluxes, gain=gain)
     except InputError:
         nothing, matrix = np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
         return nothing, matrix, matrix, np.full((sources, beams), np.nan), np.full((sources, beams), np.nan)
-    null, null_covariance = half_turn_null(fluxes, gain=gain)
+    null, null_covariance = half_turn_null(fluxes, gain=gain, calibration=calibration)
     return null, null_covariance, photon_covariance(fluxes, solution, gain=gain), solution.gain, solution.gain_err
+
+
+def _trend(cycles: Stokes, kept: NDArray[np.bool_]) -> Array:
+    """Chance that noise makes the second half of the kept cycles differ so much from the first, shape (S,)."""
+    number = np.cumsum(kept, axis=1)
+    total = number[:, -1:]
+    halves = []
+    for half in (kept & (2 * number <= total), kept & (2 * number > total)):
+        part = combine(np.where(half, cycles.q, np.nan), np.where(half, cycles.u, np.nan), cycles.random_covariance)
+        halves.append(part)
+    first, second = halves
+    return np.asarray(null_p_value(first.q - second.q, first.u - second.u, first.covariance + second.covariance))
 
 
 def _null_probability(null: Array, covariance: Array) -> Array:

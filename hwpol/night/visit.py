@@ -16,8 +16,10 @@ from hwpol.frames.world import World, read_world
 from hwpol.instrument.description import Section
 from hwpol.night.config_objects import PhotometryConfig, TargetConfig
 from hwpol.night.images import VisitImages
+from hwpol.night.picture import FieldPicture, field_picture
 from hwpol.night.radius import LADDER, RadiusChoice, choose_radius
 from hwpol.photometry.measure import Measurement, Stars, measure
+from hwpol.photometry.neighbours import contamination, ratio_error
 from hwpol.pixels import Box
 from hwpol.registration import Placement, register
 
@@ -27,6 +29,8 @@ Array = NDArray[np.float64]
 NEAR_XY = 12.0
 #: Seconds of arc within which a star is taken for the target at a place from world coordinates.
 NEAR_SKY = 12.0
+#: Fraction of the fwhm within which a detected star and a place are one source.
+SAME_STAR = 0.5
 #: Full width taken where no star tells it, pixels.
 UNKNOWN_FWHM = 4.0
 
@@ -62,8 +66,9 @@ class VisitResult:
     ra, dec : ndarray, shape (S,)
     flags : ndarray of int, shape (S,)
         To add to what the solve finds.
-    drift : ndarray, shape (2,)
-        Spread of q, u over the plateau (instrument frame).
+    drift : ndarray, shape (S, 2)
+        Systematic error of q and u (instrument frame): spread over the plateau of radii (first target), and what the
+        light of other stars can do.
     choice : RadiusChoice or None
     radii : ndarray, shape (R,)
         Radii of the curve, pixels.
@@ -71,7 +76,10 @@ class VisitResult:
         Light of the first target inside each radius relative to the largest.
     stamps : ndarray, shape (B, n, n)
         Picture of the first target in every beam of the first frame, electrons.
-    stamp_corner : ndarray, shape (B, 2)
+    stamp_corner, stamp_place : ndarray, shape (B, 2)
+        Pixel of each picture's first element, and where the target falls.
+    picture : FieldPicture or None
+        The field of the first beam and frame, where its stars are measured.
     notes : tuple of str
     """
 
@@ -94,6 +102,8 @@ class VisitResult:
     stamps: Array
     stamp_corner: Array
     notes: tuple[str, ...] = ()
+    stamp_place: Array | None = None
+    picture: FieldPicture | None = None
 
 
 def reduce_visit(task: VisitTask) -> VisitResult:
@@ -128,16 +138,17 @@ def reduce_visit(task: VisitTask) -> VisitResult:
         "hits": task.hits,
     }
     measured = measure(images, px, py, radii=radii, **options)
+    foreign = np.stack([_foreign(placement, images, x, y, fwhm, radius) for radius in radii])
     choice = choose_radius(
         [_fluxes(task, measured, r, x[:1], y[:1], slice(0, 1)) for r in range(len(radii))],
         multiples,
+        foreign[:, 0],
         method=task.method,
         gain=task.gain,
     )
     index = choice.index if best else int(np.argmin(np.abs(radii - task.photometry.radius.pixels(fwhm))))
     if best and not choice.plateau:
         flags[0] |= int(Flag.NO_PLATEAU)
-    drift = choice.drift if best else np.zeros(2)
     fluxes = _fluxes(task, measured, index, x, y, slice(None))
 
     if task.photometry.sources == "field":
@@ -147,6 +158,10 @@ def reduce_visit(task: VisitTask) -> VisitResult:
             field = measure(images, fx, fy, radii=radii[index : index + 1], **options)
             fluxes = _join(fluxes, _fluxes(task, field, 0, more_x, more_y, slice(None)))
             flags = np.append(flags, np.zeros(len(more_x), dtype=int))
+    drift = np.repeat(_foreign(placement, images, fluxes.x, fluxes.y, fwhm, float(radii[index]))[:, None], 2, axis=1)
+    flags |= _neighbour_flags(fluxes, drift[:, 0])
+    if best:
+        drift[0] = np.hypot(drift[0], choice.drift)
     if task.calibrator.noise_doubtful:
         flags |= int(Flag.NOISE_DOUBTFUL)
     ra, dec = _coordinates(task, world, fluxes)
@@ -172,6 +187,8 @@ def reduce_visit(task: VisitTask) -> VisitResult:
         growth=growth,
         stamps=stamps,
         stamp_corner=corner,
+        stamp_place=np.stack([px[0, 0], py[0, 0]], axis=-1),
+        picture=field_picture(images, sections[0]) if task.photometry.sources == "field" else None,
         notes=tuple(notes),
     )
 
@@ -287,6 +304,32 @@ def _known_stars(placement: Placement, fwhm: float) -> Stars | None:
     # A star ten times brighter is felt half a width further out (wings of a Moffat profile against the noise).
     reach = 1.5 + 0.5 * np.log10(np.maximum(np.nan_to_num(stars.snr, nan=10.0) / 10.0, 1.0))
     return Stars(x, y, np.minimum(reach, 3.5) * fwhm)
+
+
+def _foreign(placement: Placement, images: VisitImages, x: Array, y: Array, fwhm: float, radius: float) -> Array:
+    """Error of q that other stars' light can make in apertures of sources at (x, y) of the first frame, shape (S,)."""
+    stars = placement.stars
+    if not len(stars):
+        return np.zeros(len(x))
+    alone = np.hypot(stars.x[:, None] - x, stars.y[:, None] - y).min(axis=0) > SAME_STAR * fwhm
+    everyone_x, everyone_y = np.append(stars.x, x[alone]), np.append(stars.y, y[alone])
+    flux = np.append(stars.flux, np.full(int(alone.sum()), np.nanmin(stars.flux)))
+    px, py = placement.positions(everyone_x, everyone_y)
+    share = contamination(
+        px[:, :1], py[:, :1], np.repeat(flux[:, None], px.shape[2], axis=1), fwhm, radius,
+        plane_of_beam=images.hdu_of_beam,
+    )  # fmt: skip
+    error = np.nan_to_num(ratio_error(share, np.nanmedian(placement.fwhm, axis=1)))
+    nearest = np.hypot(everyone_x[:, None] - x, everyone_y[:, None] - y).argmin(axis=0)
+    return np.asarray(error[nearest])
+
+
+def _neighbour_flags(fluxes: Fluxes, error: Array) -> NDArray[np.int_]:
+    """NEIGHBOUR where other stars can change q by more than its photon error."""
+    with np.errstate(invalid="ignore", divide="ignore"):
+        counts = np.nansum(fluxes.flux, axis=(1, 2))
+        photon = np.sqrt(2 * np.nansum(fluxes.variance, axis=(1, 2))) / counts
+    return np.where(error > photon, int(Flag.NEIGHBOUR), 0)
 
 
 def _field(placement: Placement, x: Array, y: Array, fwhm: float) -> tuple[Array, Array]:
