@@ -81,10 +81,13 @@ def _inverse(matrix: Array) -> Array:
 
 
 def _inverse_root(matrix: Array) -> Array:
-    """Symmetric inverse square root of positive 2 x 2 matrices."""
-    scale = np.sqrt(matrix[..., 0, 0] * matrix[..., 1, 1] - matrix[..., 0, 1] ** 2)[..., None, None]
-    trace = np.trace(matrix, axis1=-2, axis2=-1)[..., None, None]
-    return _inverse((matrix + scale * np.eye(2)) / np.sqrt(trace + 2 * scale))
+    """Symmetric inverse square root of positive 2 x 2 matrices; NaN where rounding has left none."""
+    det = matrix[..., 0, 0] * matrix[..., 1, 1] - matrix[..., 0, 1] ** 2
+    trace = np.trace(matrix, axis1=-2, axis2=-1)
+    positive = (det > 0) & (trace > 0)
+    scale = np.sqrt(np.where(positive, det, np.nan))[..., None, None]
+    norm = np.sqrt(np.where(positive, trace, np.nan)[..., None, None] + 2 * scale)
+    return _inverse((matrix + scale * np.eye(2)) / norm)
 
 
 def _distance(vectors: Array, centre: Array, weights: Array) -> Array:
@@ -214,7 +217,8 @@ def adopt(
     counts, scatter = (np.broadcast_to(part, (*lead, 2, 2)) for part in (counts, scatter))
     chi2_, dof_ = np.broadcast_to(chi2_, lead), np.broadcast_to(dof_, lead)
     usable = (dof_ > 0) & np.isfinite(chi2_) & np.isfinite(scatter).all(axis=(-1, -2))
-    usable &= np.isfinite(counts).all(axis=(-1, -2))
+    usable &= np.isfinite(counts).all(axis=(-1, -2)) & (counts[..., 0, 0] > 0)
+    usable &= counts[..., 0, 0] * counts[..., 1, 1] > counts[..., 0, 1] * counts[..., 1, 0]
     chance = chdtrc(np.where(usable, dof_, 1.0), np.where(usable, chi2_, 0.0))
     believed = usable & (chance < limit)
     root = np.linalg.cholesky(np.where(believed[..., None, None], counts, np.eye(2)))

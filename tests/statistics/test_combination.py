@@ -236,3 +236,13 @@ def test_a_source_that_varies_is_seen_and_gaps_are_skipped() -> None:
 def test_variability_refusals(shared: np.ndarray, group: np.ndarray | None, words: str) -> None:
     with pytest.raises(InputError, match=words):
         variability(np.zeros(3), np.zeros(3), unit(3), shared, group)
+
+
+def test_one_repeat_that_outweighs_the_rest_leaves_no_scatter() -> None:
+    """What the scatter says of the mean is then lost in rounding: unknown, and the counts' error stays."""
+    covariance = np.array([1e-17, 1.0, 1.0])[:, None, None] * np.eye(2)
+    c = combine([1.0, 1.5, 0.2], [0.0, 0.3, -0.4], covariance)
+    assert np.isnan(c.scatter_covariance).all()
+    assert not adopt(c.covariance, c.scatter_covariance, c.chi2, c.dof)[1]
+    # Nor is a scatter set against counts that have no error.
+    assert not adopt(np.zeros((2, 2)), np.eye(2), 100.0, 2)[1]

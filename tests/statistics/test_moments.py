@@ -108,3 +108,18 @@ def test_shapes_broadcast() -> None:
 def test_refusals_say_what_is_expected(call: object, words: str) -> None:
     with pytest.raises(InputError, match=words):
         call()  # type: ignore[operator]
+
+
+@pytest.mark.parametrize("ratio", [1.0, 2.0, 100.0])
+@pytest.mark.parametrize("scale", [1e-10, 1.0])
+def test_extremes_stay_finite_and_ordered(ratio: float, scale: float) -> None:
+    p = scale * np.array([0.0, 1e-3, 1.0, 30.0, 61.0, 1e8])
+    covariance = np.diag([ratio**2, 1.0]) * scale**2
+    for q, u in ((p, 0 * p), (0 * p, p), (0.6 * p, 0.8 * p)):
+        for kind in ("bayes-qu", "frequentist"):
+            low, high = interval(q, u, covariance, kind=kind)
+            assert np.all((low >= 0) & (low < high) & np.isfinite(high))
+        error = theta_error(q, u, covariance)
+        assert np.all((error > 0) & (error < 180 / np.sqrt(12) + 1e-9))
+        for method in METHODS:
+            assert np.all(debias(q, u, covariance, method) >= 0)
