@@ -24,9 +24,11 @@ _PIXEL = 3.0  # sigma from which a pixel counts towards the charge of a hit
 _BRIGHT = 30.0  # signal-to-noise ratio of an image from which its own shape is fitted
 _FEW = 6  # images a frame up to which the median over them is not trusted
 _PERSUADED = 30.0  # drop in the sum of min(z^2, 9) for which one image's word replaces the median: four pixels or so
+_FITTED = 64  # brightest sources whose own shapes are fitted; the others take what these share
+_LOOK = 4.5  # sigma of a pixel's noise from which its source is looked at closely
 _FIRST = 12  # brightest sources that choose the profile
 _PLACE = 5  # pixels across the place in which charge is added up: holds five of a track of six
-_CHUNK_PIXELS = 1 << 19
+_CHUNK_PIXELS = 1 << 17
 
 
 def find_hits(
@@ -82,8 +84,13 @@ def find_hits(
     at = np.stack([np.where(placed, dx, 0.0), np.where(placed, dy, 0.0)], axis=-1)
     shape, profile = _shapes(values, noise, good, at, fwhm)
     step = max(1, _CHUNK_PIXELS // (frames * beams * size * size))
+    look = np.zeros(count, np.bool_)
     for i in range(0, count, step):
-        part = slice(i, i + step)
+        rows = slice(i, i + step)
+        look[rows] = _stands_out(values[rows], noise[rows], good[rows], shape[rows], profile)
+    suspects = np.flatnonzero(look)
+    for i in range(0, len(suspects), step):
+        part = suspects[i : i + step]
         out[:, part] = _judge(values[part], noise[part], good[part], at[part], shape[part], profile, sizes)
     return out & placed
 
@@ -107,10 +114,12 @@ def _shapes(
     result = np.concatenate([at, np.zeros((*lead, 3))], axis=-1)
     result[..., 2] = result[..., 4] = gauss / 3.0
     beta = 3.0
+    strength = np.median(np.where(bright, ratio, 0.0), axis=(1, 2))
+    bright &= np.isin(np.arange(lead[0]), np.argsort(-strength, kind="stable")[:_FITTED])[:, None, None]
     if not bright.any():
         return result, profiles.plain(beta, typical)
     where = np.argwhere(bright)
-    first = np.argsort(-np.median(np.where(bright, ratio, 0.0), axis=(1, 2)))[:_FIRST]
+    first = np.argsort(-strength, kind="stable")[:_FIRST]
     trial = tuple(where[np.isin(where[:, 0], first)].T)
     start = np.zeros((*lead, 5))
     start[..., :2] = at
@@ -122,7 +131,7 @@ def _shapes(
     profile = profiles.plain(profiles.BETAS[int(np.argmin(costs))], typical)
     start[..., 2] = start[..., 4] = gauss / profile.beta
     weight = np.minimum(np.where(bright, ratio, 0.0), 300.0)  # beyond that the shape, not the noise, limits a fit
-    step = max(1, _CHUNK_PIXELS // (8 * pixels))
+    step = max(1, _CHUNK_PIXELS // (2 * pixels))
     for _ in range(2):
         fitted = np.full((*lead, 5), np.nan)
         for i in range(0, len(where), step):
@@ -184,6 +193,23 @@ def _from_free(free: Floats, at: Floats) -> Floats:
     x, y, a, b, c = np.moveaxis(free, -1, 0)
     a, c = np.exp(a), np.exp(c)
     return np.stack([x + at[..., 0], y + at[..., 1], a, b * np.sqrt(a * c), c], axis=-1)
+
+
+def _stands_out(
+    data: NDArray[np.float32],
+    variance: NDArray[np.float32],
+    good: NDArray[np.bool_],
+    shape: Floats,
+    profile: profiles.Profile,
+) -> NDArray[np.bool_]:
+    """Tell which sources have a pixel so far above a low guess of the image that a closer look is due, (S,)."""
+    size = round(np.sqrt(data.shape[-1]))
+    many = (-1, data.shape[-1])
+    image = profile.images(profiles.grid(size), shape.reshape(-1, 5))
+    low = np.maximum(profiles.core_amplitude(data.reshape(many), image, good.reshape(many), 0.3), 0.0)
+    above = data - (low[:, None].astype(np.float32) * image).reshape(data.shape)
+    found: NDArray[np.bool_] = np.any(good & (above > np.float32(_LOOK) * np.sqrt(variance)), axis=(1, 2, 3))
+    return found
 
 
 def _judge(
