@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections import Counter
 from typing import Any
 
 import numpy as np
@@ -26,9 +27,8 @@ _PLAUSIBLE_SCALE = (0.005, 30.0)  # arcsec/pixel
 
 def find_extension(survey: Survey) -> tuple[list[Finding], tuple[int | str, int | str]]:
     """Finding for detector.extension, and the HDU of each of two beams."""
-    some = [survey.images[i] for i in survey.science]
-    usual = max((tuple((i.hdu, i.sides) for i in images) for images in some), key=lambda t: sum(
-        t == tuple((i.hdu, i.sides) for i in images) for images in some))  # fmt: skip
+    counts = Counter(tuple((image.hdu, image.sides) for image in survey.images[i]) for i in survey.science)
+    usual = counts.most_common(1)[0][0]
     first = usual[0][0]
     if len(usual) == 2 and usual[0][1] == usual[1][1]:
         why = f"the files hold two images of one size, HDU {first} and {usual[1][0]}: taken as one per beam"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 
-from hwpol.correction.bands import band_name
+from hwpol.correction.catalogue.bands import band_name
 from hwpol.errors import MissingError
 from hwpol.frames.values import filter_name
 from hwpol.instrument.description import Keyword
@@ -36,7 +36,7 @@ def find_filters(survey: Survey) -> list[Finding]:
         why = "no keyword has values that look like filters; without it all frames count as one filter"
         return [Finding("keywords.filter", None, OPEN, why)]
     keys = _wheels(survey, key, scores, lit)
-    shown = "; ".join(f"{k}: {', '.join(survey.distinct(k, lit))}" for k in keys)
+    shown = "; ".join((f"{k}: " if len(keys) > 1 else "") + ", ".join(survey.distinct(k, lit)) for k in keys)
     named, banded = bool(_NAMES.search(key)), any(_is_filter(text) for text in survey.distinct(key, lit))
     others = [k for k, score in scores.items() if score > scores[key] - 1.0 and k not in keys]
     sure = named and banded and not others

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from functools import lru_cache
 from typing import Any
 
 from hwpol.setup.findings import GUESSED, OPEN, RECOGNISED, Finding
@@ -34,6 +35,7 @@ _NAMES = re.compile(r"(IMAGE?TYP|OBS-?TYPE|FRAME?TYP|FRMKIND|FRAME|KIND|DPR TYPE
 _MOST_VALUES = 20
 
 
+@lru_cache(maxsize=4096)
 def kind_of(text: str) -> str:
     """Kind that a header text says; "other" for frames of no use here, "" where it says nothing."""
     words = [word for word in re.split(r"[^a-z]+", text.casefold()) if word]

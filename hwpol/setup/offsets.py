@@ -20,6 +20,7 @@ Floats = NDArray[np.float64]
 
 _MOST_FRAMES = 4
 _MOST_STARS = 80
+_LEAST_SHARE = 0.3  # of the pairs that there are where every star is seen twice
 _NEAREST = 6.0  # pixels: closer companions are neighbours, not beams
 _GAIN, _READ_NOISE = 1.0, 10.0  # only the thresholds of the detection depend on them
 _APART = 1e7  # pixels between the star lists of two frames, so that no pair spans both
@@ -69,6 +70,7 @@ def measure_offset(
     offset, votes, expected = vote(
         a, b, radius=reach, tolerance=2.5, weight=weight, exclude=_NEAREST if shared else 0.0
     )
+    possible = min(len(a), len(b)) / (2 if shared else 1)
     near = np.hypot(*(b[None] - a[:, None] - offset).transpose(2, 0, 1)) <= 2.5
     count = int((near & (alike > 0.1)).sum())
     if votes <= 0 or count == 0:
@@ -76,10 +78,15 @@ def measure_offset(
     # Either image may be called the first one: the sign that grows along the axis of the split.
     if shared and offset[int(np.argmax(np.abs(offset)))] < 0:
         offset = -offset
+    place = [round(float(v), 1) for v in offset]
+    if count < _LEAST_SHARE * possible:
+        seen = f"of {possible * (2 if shared else 1):.0f} stars only {count} have a like one at {place}"
+        why = f"{seen}, as by chance; is there a second beam?"
+        return [Finding(key, None, OPEN, why)]
     sure = count >= 5 and votes > 4 * expected
     why = f"measured on {read} science frames from {count} pairs of stars of like brightness"
     why += ", far more than chance gives" if sure else "; that may be chance, look at a frame"
-    return [Finding(key, [round(float(v), 1) for v in offset], GUESSED, why)]
+    return [Finding(key, place, GUESSED, why)]
 
 
 def _stars(survey: Survey, k: int, extension: int | str, trim: Section | None) -> Stars:

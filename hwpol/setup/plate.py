@@ -21,13 +21,13 @@ from hwpol.setup.survey import Survey, as_number, plain
 Floats = NDArray[np.float64]
 
 #: Steps of a plate (deg) that are looked for, the likeliest first (common practice), with their weight.
-_STEPS = ((22.5, 2.5), (45.0, 2.0), (11.25, 1.5), (90.0, 1.5), (30.0, 0.8), (15.0, 0.8), (60.0, 0.8))
+_STEPS = ((22.5, 2.5), (45.0, 2.0), (11.25, 1.5), (90.0, 1.5), (30.0, -0.5), (15.0, -0.5), (60.0, -0.5))
 _MOST_POSITIONS = 32
 _SPREAD = 1.2  # deg: readings of one position that lie closer together than this
 _NAMES = re.compile(
-    r"(HWP|WAVE?PL|W_?PLATE|PLATE|RETARD|RET|(^|[ _-])WP|HALFW|LAMBDA|L/2|POLANG|POLPOS|PSI|RSP|ROTHWP|MODUL)", re.I
+    r"(HWP|WAVE?PL|W_?PLATE|PLATE|RETARD|RET|(^|[ _-])WP|HALFW|LAMBDA|L/2|POL(?!Y|E)|PSI|RSP|ROTHWP|MODUL)", re.I
 )
-_REMARKS = re.compile(r"half.?wave|wave.?plate|retarder|plate (angle|position)|lambda/2|hwp|modulator", re.I)
+_REMARKS = re.compile(r"half.?wave|wave.?plate|retarder|plate (angle|position)|lambda/2|hwp|modulator|polari[sz]", re.I)
 _NOT_NAMES = re.compile(
     r"(TEMP|AIRM|FOC|FILT|DOME|SLIT|AZ|ALT|(^|[ _-])HA$|EXPT|TIME|^UT|DATE|MJD|JD|COUNT|NUM|SEQ|NO$|ROTPA|ROTATOR|DITH"
     r"|OFF|RA$|DEC$|GAIN|WIND|HUM|PRES|PIXEL|CRVAL|CRPIX|CD\d|CDELT|SEC|QWP|GRAT)",
@@ -35,17 +35,17 @@ _NOT_NAMES = re.compile(
 )
 _NOT_REMARKS = re.compile(
     r"temperature|airmass|focus|filter|dome|dither|offset|counter|exposure|second|quarter|humidity|rotator|"
-    r"sequence|number of|detector|pixel|field rotation|sky angle",
+    r"sequence|number of|arcsec|telescope|detector|pixel|field rotation|sky angle",
     re.I,
 )
 _TEXT_NUMBER = re.compile(r"[+-]?\d+(?:\.\d+)?")
 # A word that goes before the angle where it is hidden in another text.
 _HIDDEN = re.compile(
-    r"(?i)(.*?)[\s_,;:()\[\]/-]*\b(hwp|wp|waveplate|wave-plate|plate|ret|retarder|psi|pol|angle|ang|pos|position)"
-    r"([\s_=:@-]*)(-?\d+(?:\.\d+)?)\s*(?:deg|d)?\b"
+    r"(?i)(?<![a-z])(hwp|wp|waveplate|wave-plate|plate|ret|retarder|psi|pol|angle|ang|pos|position)[\s_=:@-]*-?\d"
 )
-_TRAILING = re.compile(r"(.*?\S)[\s_,;:@-]+(-?\d+\.\d+)\s*(?:deg)?$")
+_TRAILING = re.compile(r".*?\S[\s_,;:@-]+-?\d+(?:\.\d+)?\s*(?:deg)?$")
 _BEST_ENOUGH = 5.0
+_LEAST_SHARE = 0.2  # of the science frames that hold the keyword
 
 
 @dataclass(frozen=True)
@@ -86,13 +86,15 @@ def find_plate(survey: Survey, object_key: str) -> tuple[list[Finding], Reading 
 
 def _candidates(survey: Survey, object_key: str) -> list[Reading]:
     science = survey.science
-    objects = [plain(survey.cards[object_key][i]) if object_key in survey.cards else "" for i in science]
     found = []
     for key in survey.cards:
-        if survey.share(key, science) < 0.5:
+        # Acquisition images and the like may go without the keyword.
+        rows = [i for i in science if survey.cards[key][i] is not None]
+        if len(rows) < max(2.0, _LEAST_SHARE * len(science)):
             continue
+        objects = [plain(survey.cards[object_key][i]) if object_key in survey.cards else "" for i in rows]
         hint = _hint(survey, key)
-        column = [survey.cards[key][i] for i in science]
+        column = [survey.cards[key][i] for i in rows]
         for reading in _readings(survey, key, column, hint):
             names = objects
             if reading.object_pattern and key == object_key:
@@ -142,7 +144,7 @@ def _numeric(key: str, numbers: Floats, hint: float) -> list[Reading]:
         counts = regular and steps[0] == 1 and seen[0] in (0, 1)
         often = len(seen) <= np.isfinite(numbers).sum() / 2
         if (counts and len(seen) >= 3 and (often or hint > 0)) or (regular and hint > 2 and len(seen) >= 3):
-            found.append(Reading(key, "index", numbers, 0.0, float(seen[0]), len(seen), 0.0, 0.5))
+            found.append(Reading(key, "index", numbers, 0.0, float(seen[0]), len(seen), 0.0, 0.0))
     return found
 
 
@@ -183,15 +185,16 @@ def _textual(key: str, texts: list[str], hint: float) -> list[Reading]:
     found = []
     hidden = [_HIDDEN.search(text) for text in texts]
     if sum(match is not None for match in hidden) > 0.8 * len(filled):
-        word = next(match.group(2) for match in hidden if match is not None)
-        pattern = rf"(?i)\b{re.escape(word)}[\s_=:@-]*(-?\d+(?:\.\d+)?)"
-        rest = rf"(?i)^(.*?)[\s_,;:()\[\]/-]*\b{re.escape(word)}[\s_=:@-]*-?\d"
-        found += _inside(key, texts, pattern, rest, 2.0)
-    trailing = [_TRAILING.search(text) for text in texts]
-    if not found and sum(match is not None for match in trailing) > 0.8 * len(filled):
+        word = next(match.group(1) for match in hidden if match is not None)
+        before = rf"(?<![a-z]){re.escape(word)}[\s_=:@-]*"
         found += _inside(
-            key, texts, r"[\s_,;:@-](-?\d+\.\d+)\s*(?:deg)?$", r"^(.*?\S)[\s_,;:@-]+-?\d+\.\d+\s*(?:deg)?$", 0.5
+            key, texts, rf"(?i){before}(-?\d+(?:\.\d+)?)", rf"(?i)^(.*?)[\s_,;:()\[\]/-]*{before}-?\d", 2.0
         )
+    if not found and sum(_TRAILING.match(text) is not None for text in texts) > 0.8 * len(filled):
+        number = r"[\s_,;:@-]+(-?\d+(?:\.\d+)?)\s*(?:deg)?$"
+        rest = r"^(.*?\S)[\s_,;:@-]+-?\d+(?:\.\d+)?\s*(?:deg)?$"
+        # Names of stars end in numbers too: only angles count.
+        found += [reading for reading in _inside(key, texts, number, rest, 0.5) if reading.form == "angle"]
     if found or len(set(filled)) > _MOST_POSITIONS or len(set(filled)) < 3:
         return found
     numbers = np.array([_number_in(text) for text in texts])
@@ -253,7 +256,8 @@ def _findings(survey: Survey, chosen: Reading, others: list[Reading]) -> list[Fi
     key = chosen.key
     named = bool(_NAMES.search(key)) or bool(_REMARKS.search(survey.comment(key)))
     if chosen.form in ("index", "text"):
-        shown = f"{chosen.positions} positions ({', '.join(sorted(survey.distinct(key, survey.science))[:8])})"
+        texts = {_first(chosen.pattern, t) if chosen.pattern else t for t in survey.distinct(key, survey.science)}
+        shown = f"{chosen.positions} positions ({', '.join(sorted(texts)[:8])})"
         sure = named
     else:
         shown = f"{chosen.positions} positions at steps of {chosen.step:g} deg"

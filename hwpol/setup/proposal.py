@@ -242,7 +242,7 @@ def _names(found: Survey, entry: Any) -> dict[str, list[int]]:
     keyword = _keyword(entry)
     names: dict[str, list[int]] = {}
     shown: dict[str, str] = {}
-    for i in found.science:
+    for i in found.of("science"):
         name = _read(found, i, keyword)
         if normal_name(name):
             names.setdefault(shown.setdefault(normal_name(name), name), []).append(i)

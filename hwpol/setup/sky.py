@@ -49,6 +49,8 @@ _HEIGHT = [
     "OBSGEO-H",
     "GEOELEV",
 ]
+# Of these names some hold the angle of a bearing, not one on the sky.
+_MECHANICAL = ("ROTATOR", "ROTANG", "ROTANGLE", "ROTPOSN", "DEROTPA")
 _SIDEREAL = ("ST", "LST", "LST-OBS", "SIDTIME", "LSTHDR", "ST-OBS", "SIDEREAL")
 _LONGEST_DRIFT = 3.0  # deg of sidereal time between the header's own and the frame's start
 
@@ -151,10 +153,13 @@ def _angle_keyword(survey: Survey, science: list[int], wcs: Floats) -> tuple[Fin
             if varies:
                 seen.append(f"{key} varies, but not as the WCS does")
                 continue
-        if varies:
+        if varies and key.rpartition(" ")[2] in _MECHANICAL:
+            seen.append(f"{key} varies, but may be the rotator's own angle")
+        elif varies:
             why = f"{key} varies between frames and is named as an angle on the sky; is it that of +Q?"
             return Finding(entry, key, GUESSED, why), "; here an angle turns between frames"
-        seen.append(f"{key} = {survey.distinct(key, science)[0]} on all frames")
+        else:
+            seen.append(f"{key} = {survey.distinct(key, science)[0]} on all frames")
     why = "; ".join(seen[:3]) if seen else "no keyword of a usual name holds it"
     return Finding(entry, None, OPEN, f"{why}. Give the keyword of chi, the position angle of +Q, if it ever turns"), ""
 

@@ -174,6 +174,25 @@ def steps(shot: Shot) -> Cards:
     return {**cards, "FILTER": shot.filter, "HWPENC": (2500 * shot.position, "half-wave plate encoder")}
 
 
+def in_a_name(shot: Shot) -> Cards:
+    """The angle only inside the name that the file had at the telescope."""
+    name = f"{shot.target.replace(' ', '')}_{shot.filter}_hwp{shot.psi:04.1f}_{shot.number:03d}.fits"
+    cards = {**common(shot), "IMAGETYP": {"bias": "bias", "flat": "flat", "science": "object"}[shot.kind]}
+    return {**cards, "FILTER": shot.filter, "ORIGNAME": name}
+
+
+def at_the_end(shot: Shot) -> Cards:
+    """The angle as the last word of the object, whose name ends in a number itself."""
+    cards = {**common(shot), "IMAGETYP": {"bias": "bias", "flat": "flat", "science": "object"}[shot.kind]}
+    return {**cards, "FILTER": shot.filter, "OBJECT": f"{shot.target} {shot.psi:g}" if shot.target else shot.kind}
+
+
+def lettered(shot: Shot) -> Cards:
+    """Letters for positions."""
+    cards = {**common(shot), "IMAGETYP": {"bias": "bias", "flat": "flat", "science": "object"}[shot.kind]}
+    return {**cards, "FILTER": shot.filter, "HWP": "ABCD"[shot.position]}
+
+
 def write_night(folder: Path, habit: Callable[[Shot], Cards], truth: tuple[Shot, ...]) -> dict[str, Shot]:
     """Write a night; science frames in raw/, calibrations in cal/; the truth by file name."""
     named = {}
@@ -203,6 +222,9 @@ HABITS: dict[str, tuple[Any, ...]] = {
     "with_unit": (with_unit, FOUR, "PLATE", "OBJECT", "FILTER"),
     "in_radians": (in_radians, FOUR, "WPROT", "EXPTYPE", "FILTER"),
     "steps": (steps, FOUR, "HWPENC", "IMAGETYP", "FILTER"),
+    "in_a_name": (in_a_name, FOUR, "ORIGNAME", "IMAGETYP", "FILTER"),
+    "at_the_end": (at_the_end, FOUR, "OBJECT", "IMAGETYP", "FILTER"),
+    "lettered": (lettered, FOUR, "HWP", "IMAGETYP", "FILTER"),
 }
 # deg: read-back angles jitter by 0.06 rms; of 48 the largest stays below five of these in all but 3e-5 of nights.
 JITTER = 0.3
