@@ -20,7 +20,7 @@ from hwpol.statistics.debias import estimate
 from hwpol.statistics.intervals import LONGEST_EXACT
 from hwpol.statistics.moments import Array, Geometry, geometry, null_p_value
 from hwpol.statistics.posterior import variances
-from hwpol.statistics.tables import LONGEST, ROUND, Table, root
+from hwpol.statistics.tables import ROUND, Table, not_tabulated, root
 
 UNIFORM = 180.0 / np.sqrt(12.0)  # standard deviation of an angle of which nothing is known, degrees
 _SCALE = 2.0  # p0 = scale x / (1 - x)
@@ -131,12 +131,15 @@ def _evaluate(g: Geometry, p0: Array, level: float | None) -> Array:
     stretch, tilt = np.minimum(g.stretch[good], LONGEST_EXACT), g.tilt[good]
     tilt = np.where(stretch < ROUND, 0.0, tilt)
     signal = p0[good] / g.unit[good]
-    value = _table(level)(signal / (signal + _SCALE), stretch, tilt)
-    value = value * np.sqrt(variances(stretch, tilt)[1]) / np.hypot(1.0, signal)
-    long = stretch > LONGEST
-    if long.any():
-        shape = signal[long], stretch[long], tilt[long]
-        value[long] = spread(*shape) if level is None else half_width(*shape, level)
+    exact = not_tabulated(stretch)
+    value = np.empty_like(signal)
+    if exact.any():
+        shape = signal[exact], stretch[exact], tilt[exact]
+        value[exact] = spread(*shape) if level is None else half_width(*shape, level)
+    if not exact.all():
+        rest = signal[~exact], stretch[~exact], tilt[~exact]
+        tabulated = _table(level)(rest[0] / (rest[0] + _SCALE), *rest[1:])
+        value[~exact] = tabulated * np.sqrt(variances(*rest[1:])[1]) / np.hypot(1.0, rest[0])
     out[good] = value
     return out
 

@@ -19,7 +19,7 @@ from hwpol.errors import InputError
 from hwpol.statistics.belt import Belt, axes, normal_half_width, null_radius
 from hwpol.statistics.moments import Array, geometry
 from hwpol.statistics.posterior import FAR, Posterior, variances
-from hwpol.statistics.tables import LONGEST, ROUND, Table, root
+from hwpol.statistics.tables import ROUND, Table, not_tabulated, root
 
 Kind = Literal["bayes", "bayes-qu", "frequentist"]
 KINDS: tuple[str, ...] = get_args(Kind)
@@ -149,10 +149,13 @@ def _evaluate(kind: str, level: float, q: ArrayLike, u: ArrayLike, covariance: A
     unit, stretch, tilt = g.unit[good], np.minimum(g.stretch[good], LONGEST_EXACT), g.tilt[good]
     p = g.p[good] / unit
     tilt = np.where(stretch < ROUND, 0.0, tilt)
-    ends = np.stack(_ends(kind, float(level))(p, stretch, tilt)) if p.size else np.empty((2, 0))
-    long = stretch > LONGEST
-    if long.any():
-        ends[:, long] = solve(kind, float(level), p[long], stretch[long], tilt[long])
+    exact = not_tabulated(stretch)
+    ends = np.empty((2, p.size))
+    if exact.any():
+        ends[:, exact] = solve(kind, float(level), p[exact], stretch[exact], tilt[exact])
+    if not exact.all():
+        rest = p[~exact], stretch[~exact], tilt[~exact]
+        ends[:, ~exact] = np.stack(_ends(kind, float(level))(*rest))
     low[good], high[good] = ends * unit
     return low, high
 

@@ -13,17 +13,24 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.interpolate import CubicSpline, NdBSpline, make_interp_spline
 
 from hwpol.statistics.moments import Array
 
 # Beyond 3:1 a posterior flat in p can have two peaks and the ends of its shortest interval jump from one to the other.
 LONGEST = float(np.log(2.5))
+FEW = 1000  # so many values are computed exactly sooner than the tables for general ellipses are made
 ROUND = 1e-6  # below this stretch the ellipse is a circle to better than the tables' accuracy
 _STRETCH = np.linspace(0.0, LONGEST, 9)
 _TILT = np.linspace(0.0, 0.5 * np.pi, 11)
 
 Function = Callable[[Array, Array, Array], Array]
+
+
+def not_tabulated(stretch: Array) -> NDArray[np.bool_]:
+    """Which values are computed exactly: long ellipses, and all but circles where they are few."""
+    return np.asarray(stretch > (ROUND if np.sum(stretch > ROUND) <= FEW else LONGEST))
 
 
 @dataclass(frozen=True)
