@@ -15,6 +15,7 @@ Floats = NDArray[np.float64]
 SIGMA_TO_FWHM = 2.3548200450309493  # sqrt(8 ln 2)
 
 _PASSES = 40
+_CHUNK_PIXELS = 1 << 15
 _SETTLED = 1e-4  # relative change of the width between passes: far below what a width is used for (1e-2)
 
 
@@ -61,54 +62,50 @@ def shapes(data: Floats, dx: Floats, dy: Floats, *, start: float = 3.0) -> Shape
     iteration (Bernstein & Jarvis 2002, AJ 123, 583, from memory). For a Gaussian image the result is its own width; for
     a Moffat profile of index 3 and fwhm above 3 pixels it is 13 to 16 percent above the fwhm of the profile.
     """
-    size = data.shape[-1]
-    lead = data.shape[:-2]
+    size, lead = data.shape[-1], data.shape[:-2]
     stamps = np.asarray(data, dtype=np.float64).reshape(-1, size * size)
-    offset = np.arange(size) - size // 2
-    gx = (offset[None, :] - np.asarray(dx, dtype=np.float64).reshape(-1, 1))[:, None, :].repeat(size, 1)
-    gy = (offset[None, :] - np.asarray(dy, dtype=np.float64).reshape(-1, 1))[:, :, None].repeat(size, 2)
-    gx, gy = gx.reshape(stamps.shape), gy.reshape(stamps.shape)
-    count = len(stamps)
-    first = (start / SIGMA_TO_FWHM) ** 2
-    cov = np.tile([first, first, 0.0], (count, 1))
-    alive = np.isfinite(gx[:, 0]) & np.isfinite(gy[:, 0]) & np.isfinite(stamps).all(axis=1)
-    active = np.flatnonzero(alive)
-    done = np.zeros(count, np.bool_)
-    largest = (0.75 * size / SIGMA_TO_FWHM) ** 2  # wider images than that are the stamp, not the star
-    for _ in range(_PASSES):
-        if not len(active):
-            break
-        x, y, image = gx[active], gy[active], stamps[active]
-        cxx, cyy, cxy = cov[active].T
-        det = cxx * cyy - cxy**2
-        weight = np.exp(-0.5 * (cyy[:, None] * x * x - 2 * cxy[:, None] * x * y + cxx[:, None] * y * y) / det[:, None])
-        weight *= image
-        total = weight.sum(axis=1)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            raw = np.stack([(weight * x * x).sum(1), (weight * y * y).sum(1), (weight * x * y).sum(1)])
-            moments = 2.0 * raw / total
-        fresh = moments.T
-        sound = (
-            (total > 0)
-            & np.isfinite(fresh).all(axis=1)
-            & (fresh[:, 0] > 0.05)
-            & (fresh[:, 1] > 0.05)
-            & (fresh[:, 0] < largest)
-            & (fresh[:, 1] < largest)
-        )
-        sound &= fresh[:, 0] * fresh[:, 1] - fresh[:, 2] ** 2 > 1e-3
-        step = np.abs(fresh[:, :2] / cov[active, :2] - 1.0).max(axis=1)
-        cov[active[sound]] = fresh[sound]
-        alive[active[~sound]] = False
-        done[active[sound & (step < _SETTLED)]] = True
-        active = active[sound & (step >= _SETTLED)]
-    cov[~(alive & done)] = np.nan
-    cxx, cyy, cxy = cov.T
+    x, y = (np.asarray(a, dtype=np.float64).reshape(-1) for a in (dx, dy))
+    step = max(1, _CHUNK_PIXELS // size**2)
+    blocks = [_matched(stamps[i : i + step], x[i : i + step], y[i : i + step], start) for i in range(0, len(x), step)]
+    cxx, cyy, cxy = np.concatenate(blocks or [np.empty((0, 3))]).T
     middle, spread = 0.5 * (cxx + cyy), np.hypot(0.5 * (cxx - cyy), cxy)
     major, minor = np.sqrt(middle + spread), np.sqrt(np.maximum(middle - spread, 0.0))
     angle = np.mod(0.5 * np.degrees(np.arctan2(2.0 * cxy, cxx - cyy)), 180.0)
     fwhm = SIGMA_TO_FWHM * np.sqrt(major * minor)
     return Shapes(fwhm.reshape(lead), (1.0 - minor / major).reshape(lead), angle.reshape(lead))
+
+
+def _matched(stamps: Floats, dx: Floats, dy: Floats, start: float) -> Floats:
+    """Covariances (xx, yy, xy) of the matched Gaussians of N flattened stamps, (N, 3); NaN where there is none."""
+    count, size = len(stamps), round(np.sqrt(stamps.shape[1]))
+    offset = np.arange(size) - size // 2
+    gx = np.tile(offset, size) - dx[:, None]
+    gy = np.repeat(offset, size) - dy[:, None]
+    first = (start / SIGMA_TO_FWHM) ** 2
+    cov = np.tile([first, first, 0.0], (count, 1))
+    done = np.zeros(count, np.bool_)
+    active = np.flatnonzero(np.isfinite(dx) & np.isfinite(dy) & np.isfinite(stamps).all(axis=1))
+    largest = (0.75 * size / SIGMA_TO_FWHM) ** 2  # wider images than that are the stamp, not the star
+    for _ in range(_PASSES):
+        if not len(active):
+            break
+        x, y = gx[active], gy[active]
+        cxx, cyy, cxy = cov[active].T[:, :, None]
+        det = cxx * cyy - cxy**2
+        weight = np.exp(-0.5 * (cyy * x * x - 2 * cxy * x * y + cxx * y * y) / det) * stamps[active]
+        total = weight.sum(axis=1)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            raw = np.stack([(weight * x * x).sum(1), (weight * y * y).sum(1), (weight * x * y).sum(1)])
+            fresh = (2.0 * raw / total).T
+        sound = (total > 0) & np.isfinite(fresh).all(axis=1)
+        sound &= (fresh[:, :2] > 0.05).all(axis=1) & (fresh[:, :2] < largest).all(axis=1)
+        sound &= fresh[:, 0] * fresh[:, 1] - fresh[:, 2] ** 2 > 1e-3
+        settled = np.abs(fresh[:, :2] / cov[active, :2] - 1.0).max(axis=1) < _SETTLED
+        cov[active[sound]] = fresh[sound]
+        done[active[sound & settled]] = True
+        active = active[sound & ~settled]
+    cov[~done] = np.nan
+    return cov
 
 
 def frame_fwhm(fwhm: Floats, weight: Floats) -> Floats:

@@ -27,6 +27,8 @@ _PERSUADED = 30.0  # drop in the sum of min(z^2, 9) for which one image's word r
 _FITTED = 64  # brightest sources whose own shapes are fitted; the others take what these share
 _LOOK = 4.5  # sigma of a pixel's noise from which its source is looked at closely
 _FIRST = 12  # brightest sources that choose the profile
+_OWN = 0.1  # fraction of the image up to which what the profile leaves is the star's own
+_SWELL = 0.5  # change of a neighbour's light in a pixel by half a pixel of dither and a quarter of the seeing
 _PLACE = 5  # pixels across the place in which charge is added up: holds five of a track of six
 _CHUNK_PIXELS = 1 << 17
 
@@ -247,7 +249,12 @@ def _judge(
     spread2 = np.where(core, (residual**2 / 0.4549 - error2) / np.maximum(model, 1e-6) ** 2, np.nan)
     spread2[~core.any(axis=(1, 2, 3))] = 0.0
     tolerance2 = np.maximum(np.nanmedian(spread2, axis=(1, 2, 3)), 0.0)[:, None, None, None]
-    error = np.sqrt(error2 + tolerance2 * model**2)
+    # Light beside the star (a neighbour, perhaps of another beam) moves and swells with the frames.
+    noise_of_common = np.sqrt(np.where(known, variance, 0.0).sum(axis=axis, keepdims=True)) / n
+    beside = np.abs(level * common) - _OWN * model
+    beside = np.where((beside > 0) & (np.abs(level * common) > 3.0 * noise_of_common), np.abs(level * common), 0.0)
+    around = maximum_filter(beside.reshape(*data.shape[:3], size, size), (1, 1, 1, 3, 3), mode="constant")
+    error = np.sqrt(error2 + tolerance2 * model**2 + (_SWELL * around.reshape(data.shape)) ** 2)
     excess = _above_partners(residual, error, level, size)
     z = excess / error
     charge = np.where(z > _PIXEL, excess, 0.0)

@@ -28,6 +28,9 @@ NOISE_RANGE = (0.7, 1.4)
 noise or gain off by about 20 percent."""
 
 
+_MEASURABLE = 15.0  # signal-to-noise ratio from which a width is good to about 10 percent
+
+
 @dataclass(frozen=True)
 class Stars:
     """Known stars of the field in every frame and beam, to be kept out of the sky annuli.
@@ -255,7 +258,9 @@ class _Work:
         data, variance, mask = gather(pixels, ix, iy, half)
         data -= sky.level[:, None, None]
         smallest = int(np.argmin(self.radii[:, k]))
-        unfit = ~sums.usable[:, smallest] | np.isnan(sky.level)
+        with np.errstate(invalid="ignore"):
+            faint = result.flux[smallest, part, k, b] < _MEASURABLE * np.sqrt(result.variance[smallest, part, k, b])
+        unfit = ~sums.usable[:, smallest] | np.isnan(sky.level) | faint
         clean = np.where(unfit[:, None, None], np.nan, np.where(mask == 0, data, 0.0))
         shape = shapes(clean, x - ix, y - iy, start=max(1.5, float(self.radii[smallest, k])))
         result.fwhm[part, k, b], result.ellipticity[part, k, b] = shape.fwhm, shape.ellipticity
