@@ -24,6 +24,8 @@ UNUSABLE = int(PixelMask.BAD | PixelMask.COSMIC_RAY | PixelMask.OUTSIDE)
 
 # Below this width the pixels, not the window, sample the star: a narrower window would see one pixel.
 _NARROWEST_WINDOW = 2.2
+# Scatter that the place within the pixel leaves at a width of 1.5 pixels; 0.003 at 2, nothing from 3 on (measured).
+_SAMPLING = 0.009
 _ITERATIONS = 25
 _CONVERGED = 2e-4
 _CHUNK_PIXELS = 4_000_000
@@ -178,8 +180,9 @@ def measure(pixels: Pixels, x: ArrayLike, y: ArrayLike, fwhm: float, *, reach: f
     Returns
     -------
     Measured
-        `err` from the propagated pixel variance, per axis. `ok` needs convergence within `reach`, S/N above 3 and
-        at least half of the window's weight on good pixels; where it is False x, y keep the last iterate.
+        `err` from the propagated pixel variance and the sampling, per axis. `ok` needs convergence within `reach`,
+        S/N above 3 and at least half of the window's weight on good pixels; where it is False x, y keep the last
+        iterate.
         `flux` is that of the Gaussian of width `fwhm` that fits best, electrons.
     """
     xs = np.atleast_1d(np.asarray(x, dtype=np.float64))
@@ -244,7 +247,7 @@ def _measure(pixels: Pixels, x: Floats, y: Floats, fwhm: float, reach: float) ->
         flux = total / norm * 2 * np.pi * sigma**2
         seen = _sum((~stamps.bad).astype(np.float64), wy, wx) / _sum(np.ones_like(stamps.data), wy, wx)
     # The holes carry no information: the error grows with the weight they took.
-    err = err / np.maximum(seen, 0.05)
+    err = np.hypot(err / np.maximum(seen, 0.05), _SAMPLING * (1.5 / max(fwhm, 1.0)) ** 4)
     ok = ~moving & (np.hypot(cx - x, cy - y) <= reach) & (snr > 3.0) & (seen >= 0.5) & np.isfinite(err) & (total > 0)
     return Measured(cx, cy, err, ok, flux, np.nan_to_num(snr))
 
@@ -318,7 +321,10 @@ def axes_of(pixels: Pixels, x: ArrayLike, y: ArrayLike, fwhm: float) -> tuple[Fl
     if n_bin > 1:
         places = _to_bins(xs, pixels.x0, n_bin), _to_bins(ys, pixels.y0, n_bin)
         axes = axes_of(binned(pixels, n_bin), *places, fwhm / n_bin)
-        return axes[0] * n_bin, axes[1] * n_bin
+        # A bin widens the star as a pixel does, by n^2 / 12 instead of 1 / 12.
+        wider = FWHM_PER_SIGMA**2 * (n_bin**2 - 1) / 12
+        major, minor = (np.sqrt(np.maximum((a * n_bin) ** 2 - wider, 0.0)) for a in axes)
+        return major, minor
     step = max(1, _CHUNK_PIXELS // (2 * _half(fwhm) + 1) ** 2)
     for start in range(0, len(index), step):
         chosen = index[start : start + step]

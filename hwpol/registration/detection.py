@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass, fields
 
 import numpy as np
@@ -10,6 +9,7 @@ from numpy.typing import NDArray
 
 from hwpol.flags import Flag
 from hwpol.pixels import PixelMask, Pixels
+from hwpol.registration.background import background, bad_lines
 from hwpol.registration.centroids import FWHM_PER_SIGMA, UNUSABLE, Bools, Floats, axes_of, binned, measure
 
 # A source whose minor axis is below this share of the field's width is not a star (hot pixel, hit, bad column).
@@ -96,9 +96,11 @@ def detect(pixels: Pixels, *, fwhm: float | None = None, threshold: float = 5.0)
     bad = ((pixels.mask & UNUSABLE) != 0) | ~np.isfinite(pixels.data) | ~np.isfinite(pixels.variance)
     if min(pixels.data.shape) < 3 or bad.all():
         return no_stars()
+    data = np.where(bad, 0.0, pixels.data - background(pixels.data, bad)).astype(np.float32)
+    bad |= bad_lines(data, bad)
     flat = Pixels(
-        np.where(bad, 0.0, pixels.data - _background(pixels.data, bad)).astype(np.float32),
-        np.where(bad, 0.0, np.maximum(pixels.variance, 0.0)).astype(np.float32),
+        np.where(bad, np.float32(0), data),
+        np.where(bad, np.float32(0), np.maximum(pixels.variance, np.float32(0))),
         pixels.mask | np.where(bad, np.uint8(PixelMask.BAD), np.uint8(0)),
     )
     width = fwhm if fwhm is not None else _field_width(flat, bad)
@@ -107,78 +109,6 @@ def detect(pixels: Pixels, *, fwhm: float | None = None, threshold: float = 5.0)
     stars = _find(flat, bad, width, threshold)
     shift = np.array([pixels.x0, pixels.y0], dtype=np.float64)
     return Stars(stars.x + shift[0], stars.y + shift[1], *(getattr(stars, f.name) for f in fields(stars)[2:]))
-
-
-def _background(data: NDArray[np.float32], bad: Bools) -> Floats:
-    """Clipped median mesh of the sky, interpolated to every pixel.
-
-    The mesh is taken on averaged pixels: the sky needs no resolution and the time falls with their number.
-    """
-    from scipy import ndimage
-
-    n = int(np.clip(min(data.shape) // 128, 1, 8))
-    ny, nx = (length // n * n for length in data.shape)
-    good = ~bad[:ny, :nx].reshape(ny // n, n, nx // n, n)
-    count = good.sum(axis=(1, 3))
-    small = np.where(bad, 0.0, data)[:ny, :nx].reshape(ny // n, n, nx // n, n).sum(axis=(1, 3)) / np.maximum(count, 1)
-    mesh = _mesh(small, count == 0)
-    if n == 1:
-        return mesh
-    rows = (np.arange(data.shape[0]) + 0.5) / n - 0.5
-    columns = (np.arange(data.shape[1]) + 0.5) / n - 0.5
-    wide = ndimage.map_coordinates(
-        mesh, np.meshgrid(np.arange(mesh.shape[0]), columns, indexing="ij"), order=1, mode="nearest"
-    )
-    low = np.clip(np.floor(rows).astype(int), 0, max(mesh.shape[0] - 2, 0))
-    share = np.clip(rows - low, 0.0, 1.0)[:, None]
-    return wide[low] * (1 - share) + wide[np.minimum(low + 1, mesh.shape[0] - 1)] * share
-
-
-def _mesh(small: Floats, hidden: Bools) -> Floats:
-    from astropy.stats import SigmaClip
-    from photutils.background import Background2D, MedianBackground
-
-    box = max(24, 12 * min(small.shape) // 128)
-    seen = small[~hidden]
-    middle = float(np.median(seen))
-    spread = 1.4826 * float(np.median(np.abs(seen - middle)))
-    level = float(np.median(seen[np.abs(seen - middle) <= 3 * spread]))
-    if min(small.shape) < 3 * box:
-        return _plane(small, hidden, level)
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")
-            found = Background2D(
-                small,
-                box_size=box,
-                mask=hidden,
-                filter_size=3,
-                exclude_percentile=80.0,
-                sigma_clip=SigmaClip(sigma=3.0, maxiters=5),
-                bkg_estimator=MedianBackground(),
-            )
-            return np.asarray(found.background, dtype=np.float64)
-    except ValueError:
-        # Every box of the mesh is masked for the most part: too little sky for a mesh.
-        return _plane(small, hidden, level)
-
-
-def _plane(small: Floats, hidden: Bools, level: float) -> Floats:
-    """Clipped plane; a constant where the image is tiny."""
-    y, x = np.indices(small.shape)
-    u, v = x / small.shape[1] - 0.5, y / small.shape[0] - 0.5
-    design = np.stack([np.ones(small.shape), u, v], axis=-1)
-    if min(small.shape) < 16:
-        return np.full(small.shape, level)
-    model = np.full(small.shape, level)
-    for _ in range(6):
-        residual = small - model
-        scatter = 1.4826 * np.median(np.abs(residual[~hidden]))
-        use = ~hidden & (np.abs(residual) <= 2.5 * scatter)
-        if use.sum() < 0.2 * (~hidden).sum() or use.sum() < 30:
-            return np.full(small.shape, level)
-        model = design @ np.linalg.lstsq(design[use], small[use], rcond=None)[0]
-    return np.asarray(model)
 
 
 def _significance(flat: Pixels, bad: Bools, fwhm: float) -> Floats:
@@ -243,7 +173,7 @@ def _field_width(flat: Pixels, bad: Bools) -> float | None:
         part = table[table[:, 3] == scale][:80]
         place = measure(flat, part[:, 1], part[:, 2], scale)
         major, minor = axes_of(flat, place.x, place.y, 1.3 * scale)
-        keep = place.ok & (minor > _ONE_PIXEL) & (minor > 0.5 * major)
+        keep = place.ok & (minor > 0.7 * _ONE_PIXEL) & (minor > 0.5 * major)
         rows, columns = (
             np.clip(np.rint(v).astype(int), 0, m - 1) for v, m in zip((place.y, place.x), flat.data.shape, strict=True)
         )
@@ -293,7 +223,8 @@ def _find(flat: Pixels, bad: Bools, fwhm: float, threshold: float) -> Stars:
     narrow = minor < np.maximum(_SHARP - 3.0 / np.maximum(snr, 1.0), 0.0) * fwhm
     narrow |= (major < _ONE_PIXEL * 0.8) & (snr > 20)
     # Bad columns and long tracks: no convergence, or thin.
-    narrow |= (snr > 15) & (~np.isfinite(minor) | ((minor < 0.45 * major) & (minor < 0.85 * fwhm)))
+    narrow |= (snr > 15) & ~np.isfinite(minor)
+    narrow |= (snr > 8) & (minor < 0.45 * major) & (minor < 0.85 * fwhm)
     if fwhm < 2.0:
         # Moments of an undersampled star follow its place within the pixel: only what is long as well is no star.
         narrow &= ~(major < 2.0 * fwhm)
@@ -363,7 +294,8 @@ def _concentration(flat: Pixels, rows: NDArray[np.int64], columns: NDArray[np.in
     box = flat.data[r, c].reshape(len(rows), -1).astype(np.float64)
     noise = np.sqrt(flat.variance[r, c].reshape(len(rows), -1).max(axis=1, initial=0.0).astype(np.float64))
     total = np.maximum(box.sum(axis=1), 1e-6)
-    return (box.max(axis=1, initial=0.0) - 2.0 * noise) / total
+    top = box.max(axis=1, initial=0.0)
+    return np.where(top > 5.0 * noise, (top - 2.0 * noise) / total, 0.0)
 
 
 def _distinct(x: Floats, y: Floats, separation: float) -> Bools:

@@ -153,7 +153,7 @@ def _with_stars(
     if not reference.paired and len(layout.hdu_of_beam) > 1:
         notes.append("no star has its partner in every beam: the instrument file's beam offsets are used")
     if reference.frame:
-        notes.append(f"no usable star in the first frame: frame {reference.frame + 1} is the reference")
+        notes.append(f"no star with its partners in the first frame: frame {reference.frame + 1} is the reference")
     followed = pick_target(reference.stars, hint) if moving else None
     alone = followed is None or len(reference.stars) < 2
     follower = Follower(reference, layout, pivot, -1 if alone or followed is None else followed)

@@ -12,8 +12,8 @@ from hwpol.registration.placement import move
 
 Floats = NDArray[np.float64]
 
-# What sampling leaves in the best windowed centroid: 0.002 to 0.004 at two pixels' width (measured).
-_FLOOR = 0.004
+# What the pixels' own differences leave in the best centroid, pixels (common practice).
+_FLOOR = 0.002
 
 
 @dataclass(frozen=True)

@@ -227,7 +227,8 @@ class Follower:
             return None
         refined, residual = fit_motion(a, c, w, self.pivot, rotate=turns)
         agree = int((np.hypot(*residual.T) < np.maximum(0.5 * tolerance, 4.0 / np.sqrt(w))).sum())
-        needed = max(min(2, tried), int(np.ceil(0.3 * tried))) if tried < 20 else max(6, int(0.2 * tried))
+        # Reference stars may be blemishes; chance puts under one in a hundred images where the others say.
+        needed = max(min(2, tried), min(int(np.ceil(0.3 * tried)), 6), int(0.12 * tried))
         return _compose(refined, motion) if agree >= needed else None
 
     def _measured(self, pixels: list[Pixels], motion: Motion) -> FrameMeasures:
