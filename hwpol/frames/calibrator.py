@@ -18,7 +18,7 @@ from hwpol.errors import InputError
 from hwpol.frames.doubts import gain_unknown, missing, pedestal_unknown
 from hwpol.frames.flats import SIGNIFICANT, Lamp
 from hwpol.frames.laplacian import MARGIN, find_hits
-from hwpol.frames.masters import Master, Readout, gain_of, linearise, overscan_level, readout_of, saturation_of
+from hwpol.frames.masters import Dark, Master, Readout, gain_of, linearise, overscan_level, readout_of, saturation_of
 from hwpol.frames.opening import RawBox, layout_of, read_box
 from hwpol.frames.recipes import Recipes
 from hwpol.instrument.description import Instrument, Section
@@ -241,9 +241,8 @@ class Calibrator:
         masters = tuple(None if master is None else master.key for master in (bias, dark, flat))
         key = (readout, layout.form, masters, electrons, noise)
         plans: dict[Any, _Plan] = self._memory.setdefault("plans", {})
-        if key not in plans:
-            while len(plans) >= PLANS_KEPT:
-                del plans[next(iter(plans))]
+        plan = plans.get(key)
+        if plan is None:
             if not pedestal:
                 recipes.say(
                     "the zero level of some science frames is unknown: their flats are not applied and their noise is "
@@ -251,8 +250,11 @@ class Calibrator:
                     doubtful=True,
                 )
             bad = recipes.bad_pixels(readout, layout.shape)
-            plans[key] = _make_plan(layout.shape, readout, (bias, dark, flat), bad, electrons, noise, pedestal)
-        return plans[key]
+            plan = _make_plan(layout.shape, readout, (bias, dark, flat), bad, electrons, noise, pedestal)
+            for old in list(plans)[: max(0, len(plans) + 1 - PLANS_KEPT)]:
+                plans.pop(old, None)
+            plans[key] = plan
+        return plan
 
     def _calibrated(
         self, file: str | Path, beam: int, raw: RawBox, plan: _Plan
@@ -305,7 +307,7 @@ class Calibrator:
 def _make_plan(
     shape: tuple[int, int],
     readout: Readout,
-    masters: tuple[Master | None, Master | None, Master | None],
+    masters: tuple[Master | None, Dark | None, Master | None],
     bad: NDArray[np.bool_] | None,
     gain: float,
     read_noise: float,
@@ -315,27 +317,29 @@ def _make_plan(
     mask = np.zeros(shape, np.uint8)
     if bad is not None:
         mask[bad] |= np.uint8(PixelMask.BAD)
-    for master in masters:
+    for master in (bias, dark.master if dark is not None else None, flat):
         if master is not None:
             mask |= master.mask.astype(np.uint8)
+    dark_mean = None if dark is None else np.asarray(dark.of((slice(None), slice(None))))
     floor = read_noise**2 if np.isfinite(read_noise) else 0.0
     constant = None
     if any(master is not None for master in masters):
         constant = np.full(shape, floor, np.float32)
         # A master of a single frame has that frame's noise.
-        for master in (bias, dark):
+        for master, factor in ((bias, 1.0), (dark.master, dark.factor) if dark is not None else (None, 0.0)):
             if master is not None:
                 single = np.float32(floor / gain**2)
-                constant += np.where(np.isnan(master.variance), single, master.variance) * np.float32(gain**2)
-        if dark is not None and (bias is not None or readout.overscan is not None):
+                variance = np.where(np.isnan(master.variance), single, master.variance)
+                constant += variance * np.float32((factor * gain) ** 2)
+        if dark_mean is not None and (bias is not None or readout.overscan is not None):
             # The dark electrons taken off were counted too.
-            constant += np.maximum(dark.mean, 0.0) * np.float32(gain)
+            constant += np.maximum(dark_mean, 0.0) * np.float32(gain)
     inverse = None if flat is None else np.float32(1.0) / flat.mean
     if constant is not None and inverse is not None:
         constant *= inverse * inverse
     merged = bias is not None and dark is not None and readout.linearity == (1.0,)
     first = None if bias is None else np.asarray(bias.mean)
-    second = None if dark is None else np.asarray(dark.mean)
+    second = dark_mean
     if merged and first is not None and second is not None:
         first, second = first + second, None
     if bias is None and readout.overscan is None:

@@ -204,6 +204,11 @@ def _run(
     return np.maximum(low, (values < bottom).sum(axis=0)), np.minimum(high, (values <= top).sum(axis=0))
 
 
+@lru_cache(maxsize=64)
+def _cut_correction(k: int) -> float:
+    return float(chi2.cdf(chi2.ppf(KEPT_FRACTION, k), k + 2)) / KEPT_FRACTION
+
+
 def _tile_variance(
     values: NDArray[np.float32], low: NDArray[np.intp], high: NDArray[np.intp], shape: tuple[int, ...]
 ) -> NDArray[np.float32] | None:
@@ -219,7 +224,7 @@ def _tile_variance(
     number = high - low
     _, square = _moments(values, low, high)
     sample = np.where(number > 1, square * number / np.maximum(number - 1, 1), np.nan).reshape(shape)
-    correction = chi2.cdf(chi2.ppf(KEPT_FRACTION, n - 1), n + 1) / KEPT_FRACTION
+    correction = _cut_correction(n - 1)
     out = np.empty(shape, np.float32)
     for x in range(0, shape[1], TILE_COLUMNS):
         tile = sample[:, x : x + TILE_COLUMNS]

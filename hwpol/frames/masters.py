@@ -109,6 +109,24 @@ class Master:
         return self.layers[2]
 
 
+@dataclass(frozen=True)
+class Dark:
+    """A dark for one exposure: `master` x `factor` is in adu (factor 1, or seconds where the master is a rate)."""
+
+    master: Master
+    factor: float = 1.0
+
+    @property
+    def key(self) -> str:
+        """Digest of what it was made from."""
+        return self.master.key if self.factor == 1.0 else f"{self.master.key}@{self.factor!r}"
+
+    def of(self, cut: tuple[slice, slice]) -> NDArray[np.float32]:
+        """adu in a cut of the array."""
+        mean = self.master.mean[cut]
+        return mean if self.factor == 1.0 else mean * np.float32(self.factor)
+
+
 def digest(kind: str, files: Sequence[str | Path], *options: object) -> str:
     """Name of a master: files with size and time, options, recipe."""
     content = [RECIPE, kind, [file_mark(file) for file in files], [repr(option) for option in options]]
@@ -184,11 +202,10 @@ def _overscan(mark: FileMark, extension: int | str, section: Section) -> Oversca
     ordered = np.sort(data, axis=1)
     count = np.isfinite(ordered).sum(axis=1)
     cut = int(TRIMMED * data.shape[1])
-    level = (
-        np.nanmean(ordered[:, cut : data.shape[1] - cut], axis=1)
-        if count.min() == data.shape[1]
-        else np.nanmedian(data, axis=1)
-    )
+    if count.min() == data.shape[1]:
+        level = ordered[:, cut : data.shape[1] - cut].mean(axis=1)
+    else:
+        level = np.ma.median(np.ma.masked_invalid(data), axis=1).filled(np.nan)
     differences = np.diff(level)
     if differences.size and np.mean(differences**2) / 2 < 2.0 * sigma**2 / data.shape[1]:
         half = min(SMOOTHING_ROWS, len(level)) // 2
@@ -209,14 +226,11 @@ def clipped_sigma(values: NDArray[Any]) -> float:
 
 @dataclass(frozen=True)
 class Reducer:
-    """Raw pixels to linear adu without bias and dark.
-
-    `bias` None: nothing but the overscan (if any) is taken off. `dark` is in adu of the frame's own exposure.
-    """
+    """Raw pixels to linear adu without bias and dark; None: that step is left out."""
 
     readout: Readout
     bias: Master | None = None
-    dark: Master | None = None
+    dark: Dark | None = None
 
     def __call__(
         self, file: str | Path, box: Box | None = None, *, mask_saturated: bool = False
@@ -228,12 +242,12 @@ class Reducer:
         saturated = adu >= limit if mask_saturated else None
         overscan = overscan_level(file, self.readout)
         if overscan is not None:
-            adu = adu - overscan.over(raw.box)
+            adu -= overscan.over(raw.box)
         if self.bias is not None:
-            adu = adu - self.bias.mean[cut]
+            adu -= self.bias.mean[cut]
         adu = linearise(adu, self.readout.linearity)
         if self.dark is not None:
-            adu = adu - self.dark.mean[cut]
+            adu -= self.dark.of(cut)
         if saturated is not None:
             adu[saturated] = np.nan
         return adu
@@ -274,11 +288,3 @@ def dark_rate(masters: Sequence[Master], exposures: Sequence[float], counts: Seq
         layers[1] += np.float32((weight / norm) ** 2) * master.variance
         layers[2] = np.maximum(layers[2], master.mask)
     return Master(layers, key)
-
-
-def scaled_dark(rate: Master, exposure: float) -> Master:
-    """Dark of one exposure (s) from the rate."""
-    layers = np.array(rate.layers)
-    layers[0] *= np.float32(exposure)
-    layers[1] *= np.float32(exposure**2)
-    return Master(layers, f"{rate.key}@{exposure!r}")

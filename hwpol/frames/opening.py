@@ -30,6 +30,9 @@ from hwpol.pixels import Box
 WINDOW_CARDS = ("CCDSUM", "XBINNING", "YBINNING", "CCDSEC", "DETSEC")
 """Header cards that commonly tell binning and window (common practice); compared only where present."""
 
+Form = tuple[tuple[int, int], tuple[tuple[str, str], ...]]
+"""(ny, nx) and the binning and window cards: arrays of equal form may be subtracted from each other."""
+
 FileMark = tuple[str, int, int]
 """Path, size (bytes) and modification time (ns): what a file is recognised by."""
 
@@ -45,7 +48,7 @@ class Layout:
     shape : tuple of int
         (ny, nx) of the array.
     form : tuple
-        `shape` and the binning and window cards: arrays of equal form may be subtracted from each other.
+        See `Form`.
     full_scale : float
         Largest value (adu) that an integer array can hold; inf for floating point.
     offset : int or None
@@ -55,7 +58,7 @@ class Layout:
     """
 
     shape: tuple[int, int]
-    form: tuple[object, ...]
+    form: Form
     full_scale: float
     offset: int | None
     dtype: np.dtype[Any]
@@ -220,7 +223,7 @@ def _layout(mark: FileMark, extension: int | str) -> Layout:
         blank = int(header["BLANK"]) if bits > 0 and "BLANK" in header else None
     if offset is not None and offset + shape[0] * shape[1] * dtype.itemsize > mark[1]:
         raise InputError(f"{mark[0]}: cut short: {mark[1]} bytes hold less than its header says; copy the file again")
-    return Layout((shape[0], shape[1]), (shape, *cards), full, offset, dtype, scale, zero, blank)
+    return Layout((shape[0], shape[1]), ((shape[0], shape[1]), cards), full, offset, dtype, scale, zero, blank)
 
 
 def _is_plain(file: str) -> bool:

@@ -7,6 +7,7 @@ where a cache folder is given.
 from __future__ import annotations
 
 from collections.abc import Callable, Hashable
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -19,6 +20,7 @@ from hwpol.errors import InputError
 from hwpol.frames.flats import FlatFrame, Lamp, combine_flats, lamp_polarisation, usable_flats
 from hwpol.frames.masters import (
     SAMPLE,
+    Dark,
     Master,
     Readout,
     Reducer,
@@ -30,11 +32,10 @@ from hwpol.frames.masters import (
     overscan_level,
     read_noise_of,
     readout_of,
-    scaled_dark,
     stored,
     strip_of,
 )
-from hwpol.frames.opening import Layout, file_mark, layout_of, read_box
+from hwpol.frames.opening import Form, Layout, file_mark, layout_of, read_box
 from hwpol.instrument.description import Instrument, Section
 from hwpol.pixels import Box
 
@@ -105,19 +106,19 @@ class Recipes:
 
     # --- masters
 
-    def bias(self, readout: Readout, form: tuple[object, ...]) -> Master | None:
+    def bias(self, readout: Readout, form: Form) -> Master | None:
         """Master bias for arrays of one form."""
         return self._keep(("bias", readout, form), lambda: self._make_bias(readout, form))
 
-    def dark(self, readout: Readout, form: tuple[object, ...], exposure: float) -> Master | None:
-        """Master dark (adu) of one exposure.
+    def dark(self, readout: Readout, form: Form, exposure: float) -> Dark | None:
+        """Dark of one exposure.
 
         Frames of the same exposure are preferred; else all darks are scaled. Without bias and overscan only the same
         exposure serves: such a dark holds the pedestal too.
         """
         return self._keep(("dark", readout, form, exposure), lambda: self._make_dark(readout, form, exposure))
 
-    def flat(self, readout: Readout, form: tuple[object, ...], filter: str, psi: float = np.nan) -> Master | None:
+    def flat(self, readout: Readout, form: Form, filter: str, psi: float = np.nan) -> Master | None:
         """Master flat of one filter (and, for flats per angle, one wave-plate angle)."""
         flats = self._fitting("flat", readout, form, filter)
         if self.flat_choice == "off" or not flats:
@@ -139,10 +140,12 @@ class Recipes:
         """Whether there are darks of one exposure (told from the table)."""
         return any(_same(row.exposure, exposure) for row in self.rows("dark"))
 
-    def has_pedestal(self, readout: Readout, form: tuple[object, ...], exposure: float) -> bool:
+    def has_pedestal(self, readout: Readout, form: Form, exposure: float) -> bool:
         """Whether something tells the level of no light."""
+        ny, nx = form[0]
+        overscan = readout.overscan
         return (
-            readout.overscan is not None
+            (overscan is not None and overscan.x0 < nx and overscan.y0 < ny)
             or self.bias(readout, form) is not None
             or self.dark(readout, form, exposure) is not None
         )
@@ -169,12 +172,12 @@ class Recipes:
             self._kept[key] = make()
         return self._kept[key]
 
-    def _fitting(self, kind: str, readout: Readout, form: tuple[object, ...], filter: str | None = None) -> list[Row]:
+    def _fitting(self, kind: str, readout: Readout, form: Form, filter: str | None = None) -> list[Row]:
         """Frames of one kind whose HDU has the form asked for; the others are named in `found`."""
         key = ("fitting", kind, readout.extension, form, filter)
         return self._keep(key, lambda: self._sort_out(kind, readout, form, filter))
 
-    def _sort_out(self, kind: str, readout: Readout, form: tuple[object, ...], filter: str | None) -> list[Row]:
+    def _sort_out(self, kind: str, readout: Readout, form: Form, filter: str | None) -> list[Row]:
         fitting: list[Row] = []
         others: list[Row] = []
         for row in self.rows(kind):
@@ -194,21 +197,21 @@ class Recipes:
             )
         return fitting
 
-    def _make_bias(self, readout: Readout, form: tuple[object, ...]) -> Master | None:
+    def _make_bias(self, readout: Readout, form: Form) -> Master | None:
         files = [row.file for row in self._fitting("bias", readout, form)]
         if not files:
             return None
         key = digest("bias", files, readout)
         return stored(self.cache, key, lambda: combine_master(files, _plain(readout), key))
 
-    def _make_dark(self, readout: Readout, form: tuple[object, ...], exposure: float) -> Master | None:
+    def _make_dark(self, readout: Readout, form: Form, exposure: float) -> Dark | None:
         rows = [row for row in self._fitting("dark", readout, form) if row.exposure > 0.0]
         bias = self.bias(readout, form)
         if not rows:
             return None
         same = [row for row in rows if _same(row.exposure, exposure)]
         if same:
-            return self._dark_of(readout, bias, same)
+            return Dark(self._dark_of(readout, bias, same))
         if bias is None and readout.overscan is None:
             self.say(
                 f"darks of another exposure than {exposure:g} s cannot be scaled without bias frames and were not used"
@@ -217,6 +220,11 @@ class Recipes:
         if not np.isfinite(exposure):
             self.say("a frame without a known exposure: its dark current was not removed")
             return None
+        rate = self._keep(("dark rate", readout, form), lambda: self._make_rate(readout, bias, rows))
+        return Dark(rate, exposure)
+
+    def _make_rate(self, readout: Readout, bias: Master | None, rows: list[Row]) -> Master:
+        """adu per second from darks of all exposures."""
         groups: list[list[Row]] = []
         for row in sorted(rows, key=lambda row: row.exposure):
             if groups and _same(groups[-1][0].exposure, row.exposure):
@@ -224,29 +232,26 @@ class Recipes:
             else:
                 groups.append([row])
         masters = [self._dark_of(readout, bias, group) for group in groups]
-        rate = dark_rate(
+        return dark_rate(
             masters,
             [group[0].exposure for group in groups],
             [len(group) for group in groups],
             "+".join(master.key for master in masters),
         )
-        return scaled_dark(rate, exposure)
 
     def _dark_of(self, readout: Readout, bias: Master | None, rows: list[Row]) -> Master:
         files = [row.file for row in rows]
         key = digest("dark", files, readout, bias.key if bias else "")
         return stored(self.cache, key, lambda: combine_master(files, _plain(readout, bias), key))
 
-    def _flat_image(
-        self, readout: Readout, form: tuple[object, ...]
-    ) -> Callable[[FlatFrame, Box | None], NDArray[np.float32]]:
+    def _flat_image(self, readout: Readout, form: Form) -> Callable[[FlatFrame, Box | None], NDArray[np.float32]]:
         def image(flat: FlatFrame, box: Box | None) -> NDArray[np.float32]:
             reducer = Reducer(readout, self.bias(readout, form), self.dark(readout, form, flat.exposure))
             return reducer(flat.file, box, mask_saturated=True)
 
         return image
 
-    def _flat_frames(self, readout: Readout, form: tuple[object, ...], rows: list[Row]) -> list[FlatFrame]:
+    def _flat_frames(self, readout: Readout, form: Form, rows: list[Row]) -> list[FlatFrame]:
         beam = next(b for b in range(len(self.instrument.beams)) if readout_of(self.instrument, b) == readout)
         with_pedestal = [row for row in rows if self.has_pedestal(readout, form, row.exposure)]
         return [
@@ -254,7 +259,7 @@ class Recipes:
             for row in with_pedestal
         ]
 
-    def _make_flat(self, readout: Readout, form: tuple[object, ...], rows: list[Row]) -> Master | None:
+    def _make_flat(self, readout: Readout, form: Form, rows: list[Row]) -> Master | None:
         flats = self._flat_frames(readout, form, rows)
         if not flats:
             self.say(
@@ -287,7 +292,7 @@ class Recipes:
 
     # --- noise, lamp
 
-    def read_noise(self, beam: int, form: tuple[object, ...], file: str | Path, exposure: float, gain: float) -> float:
+    def read_noise(self, beam: int, form: Form, file: str | Path, exposure: float, gain: float) -> float:
         """Read noise (electrons): described, else from pairs of bias frames, the overscan, pairs of darks, the sky.
 
         Overscan and sky are looked at in the first few science frames of the same form (in `file`, if there are none).
@@ -296,28 +301,28 @@ class Recipes:
         if known is not None:
             return known
         readout = readout_of(self.instrument, beam)
-        masters = [m for m in (self.bias(readout, form), self.dark(readout, form, exposure)) if m is not None]
-        key = ("read noise", readout, form, tuple(master.key for master in masters))
-        noise = self._keep(key, lambda: self._measure_noise(beam, readout, form, str(file), masters, gain))
+        bias, dark = self.bias(readout, form), self.dark(readout, form, exposure)
+        parts = ([] if bias is None else [Dark(bias)]) + ([] if dark is None else [dark])
+        key = ("read noise", readout, form, tuple(part.key for part in parts))
+        noise = self._keep(key, lambda: self._measure_noise(beam, readout, form, str(file), parts, gain))
         return float(noise) * gain
 
     def _measure_noise(
-        self, beam: int, readout: Readout, form: tuple[object, ...], file: str, masters: list[Master], gain: float
+        self, beam: int, readout: Readout, form: Form, file: str, parts: list[Dark], gain: float
     ) -> float:
         """Read noise in adu."""
         files = [row.file for row in self._fitting("science", readout, form)[:SAMPLE_FRAMES]] or [file]
         scatter = [level.sigma for level in (overscan_level(name, readout) for name in files) if level is not None]
-        pairs = [float(m.facts["read_noise"]) for m in masters if m.facts.get("read_noise")]
-        if pairs and masters[0].facts.get("read_noise"):
-            return pairs[0]
-        if scatter or pairs:
-            return float(np.median(scatter or pairs))
+        pairs = [float(part.master.facts.get("read_noise") or np.nan) for part in parts]
+        for noise in (pairs[0] if self.rows("bias") and pairs else np.nan, np.median(scatter or [np.nan]), *pairs):
+            if np.isfinite(noise):
+                return float(noise)
         self.say(
             "read noise unknown, and no pairs of bias frames or overscan to tell it: taken from the background of the "
             "science frames, uncertain by the sky's own noise; set detector.read_noise",
             doubtful=True,
         )
-        zero = sum(float(np.median(master.mean[::8, ::8])) for master in masters)
+        zero = sum(float(np.median(part.of((slice(None), slice(None))))) for part in parts)
         levels = [self.background(name, beam) for name in files]
         return float(np.median([np.sqrt(max(s**2 - max(m - zero, 0.0) / gain, 0.0)) for m, s in levels]))
 
@@ -371,10 +376,8 @@ class Recipes:
     @staticmethod
     def _layout(rows: list[Row], readout: Readout) -> Layout | None:
         for row in rows:
-            try:
+            with suppress(InputError):
                 return layout_of(row.file, readout.extension)
-            except InputError:
-                continue
         return None
 
 
