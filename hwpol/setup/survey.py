@@ -120,13 +120,14 @@ def plain(value: Any) -> str:
 
 
 def as_number(value: Any) -> float:
-    """A header value as number; NaN where it is none."""
+    """A header value as number; NaN where it is none or infinite."""
     if isinstance(value, bool) or value is None:
         return math.nan
     try:
-        return float(value)
-    except (TypeError, ValueError):
+        number = float(value)
+    except (TypeError, ValueError, OverflowError):
         return math.nan
+    return number if math.isfinite(number) else math.nan
 
 
 def survey(folder: str | Path) -> Survey:

@@ -11,6 +11,8 @@ from typing import Any
 import numpy as np
 import pytest
 from astropy.io import fits
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from hwpol.errors import InputError
 from hwpol.instrument import Instrument
@@ -299,3 +301,40 @@ def test_the_summary_names_what_is_open(tmp_path: Path) -> None:
     assert "Before the files can be used:" in text
     assert "beam[2].offset" in text
     assert "HD 161056" in text
+
+
+KEYS = (
+    "OBJECT IMAGETYP OBSTYPE FILTER FILTER1 HWPANG WPPOS ROTPA EXPTIME DATE-OBS UT MJD-OBS RA DEC EQUINOX CRVAL1 CD1_1 "
+    "CD1_2 CD2_2 CDELT1 CDELT2 CROTA2 AIRMASS GAIN RDNOISE SATURATE BIASSEC TRIMSEC LONGITUD LATITUDE LST PIXSCALE "
+    "FOCALLEN XPIXSZ"
+)
+TEXTS = (
+    "bias;object;Flat Field;V;clear;22.5;hwp 45;2024-03-05;2024-03-05T01:02:03;05/03/99;12:34:56;[1:3,1:4];[0:9,1:2];;"
+    "NaN;inf;P1;_"
+)
+NUMBERS = (0, 1, -1, 90, 65535, 0.0, 22.5, 45.0, 1e-12, -99.9, 1e30, 60374.04, 359.9, 0.3927, True, None)
+VALUES = (*TEXTS.split(";"), *NUMBERS)
+
+
+@settings(deadline=None, max_examples=40)
+@given(st.integers(0, 2**31))
+def test_no_header_makes_it_stumble(tmp_path_factory: pytest.TempPathFactory, seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    folder = tmp_path_factory.mktemp("any")
+    pools = {
+        key: rng.integers(0, len(VALUES), 3) for key in rng.choice(KEYS.split(), rng.integers(0, 20), replace=False)
+    }
+    for number in range(int(rng.integers(1, 7))):
+        hdu = fits.PrimaryHDU(np.zeros((4, 5), np.int16))
+        for key, pool in pools.items():
+            hdu.header[str(key)] = VALUES[rng.choice(pool)]
+        hdu.writeto(folder / f"{number}.fits")
+    proposal = propose(folder, measure_offset=bool(seed % 2))
+    tomllib.loads(proposal.instrument_text)
+    tomllib.loads(proposal.night_text)
+    assert "Targets" in proposal.summary()
+    # Whatever is written is allowed; only what no header tells may be missing.
+    assert {line.replace(" = ", ": ").split(": ")[1] for line in proposal.problems} <= {
+        "detector.gain",
+        "beam[2].offset",
+    }
