@@ -256,7 +256,8 @@ class FilterModel:
             tilt = factor / gain - ip * step / gain**2
             changes.append(factor + step * value - observed * np.real(np.conj(tilt) * value))
         below = 1 + np.real(np.conj(ip / gain) * value)
-        push = real_pair(np.moveaxis(np.array(changes) / below, 0, -1))  # (S, parameters, 2)
+        with np.errstate(invalid="ignore"):  # values that are not known stay so
+            push = real_pair(np.moveaxis(np.array(changes) / below, 0, -1))  # (S, parameters, 2)
         forward = real_slopes(*observed_slopes(value, ip, gain))
         to_sky = real_slopes(*sky_slopes(where.chi, where.sense))
         back = to_sky @ np.linalg.inv(forward)

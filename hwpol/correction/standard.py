@@ -32,6 +32,8 @@ class Standard:
         Their errors; theta_err does not matter for a zero-polarisation standard.
     name : str
         Standards of one name share the error of their catalogue value.
+    star : str
+        Its catalogue name, which takes the place of `name` in this where it is given.
     visit : int
         Number of the visit, for the table.
     provenance, reference : str
@@ -47,6 +49,7 @@ class Standard:
     visit: int = -1
     provenance: str = ""
     reference: str = ""
+    star: str = ""
 
     def __post_init__(self) -> None:
         place = f"standard {self.name or '(unnamed)'}"
@@ -67,7 +70,7 @@ class Standard:
         """Standard with the catalogue's value; `name` (as in the header) defaults to the catalogue's."""
         return Standard(
             measured, entry.p, entry.theta, entry.p_err, entry.theta_err, name or entry.name, visit,
-            entry.provenance, entry.reference,
+            entry.provenance, entry.reference, entry.name,
         )  # fmt: skip
 
     @property

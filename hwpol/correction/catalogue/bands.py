@@ -79,7 +79,7 @@ def serkowski(wavelength: ArrayLike, lambda_max: ArrayLike, k: ArrayLike) -> Arr
 
 @dataclass(frozen=True)
 class Curve:
-    """A star's law: p_max (fraction), lambda_max (micron), K, and the covariance of (ln p_max, ln lambda_max).
+    """A star's law: p_max (fraction), lambda_max (micron), K, and the covariance of (ln p_max, ln lambda_max, K).
 
     `law` is the relation K follows while lambda_max varies within its error; "own" keeps K.
     """
@@ -93,16 +93,15 @@ class Curve:
     def at(self, wavelength: float) -> tuple[float, float]:
         """p (fraction) and its error at a wavelength (micron).
 
-        The error holds those of p_max and lambda_max, the scatter of K (0.10) and of stars about the law
-        (1 percent of p).
+        The error holds those of the parameters and the scatter of stars about the law (1 percent of p).
         """
         log = np.log(self.lambda_max / wavelength)
         p = self.p_max * np.exp(-self.k * log**2)
         slope = -2 * self.k * log
         if self.law != "own":
             slope -= K_LAWS[self.law][1] * self.lambda_max * log**2
-        gradient = np.array([1.0, slope])
-        variance = gradient @ self.covariance @ gradient + (K_ERR * log**2) ** 2 + LAW_SCATTER**2
+        gradient = np.array([1.0, slope, -(log**2)])
+        variance = gradient @ self.covariance @ gradient + LAW_SCATTER**2
         return float(p), float(p * np.sqrt(variance))
 
 
@@ -121,7 +120,7 @@ def fit_curve(wavelength: ArrayLike, p: ArrayLike, p_err: ArrayLike, law: str = 
     -------
     Curve
         lambda_max starts from what stars in general show (0.545 +- 0.09 micron, Serkowski et al. 1975), which alone
-        decides where a single band is given.
+        decides where a single band is given, and K from its relation +- 0.10.
 
     Raises
     ------
@@ -134,26 +133,25 @@ def fit_curve(wavelength: ArrayLike, p: ArrayLike, p_err: ArrayLike, law: str = 
         raise InputError("Serkowski law: no band with p > 0 and an error; give at least one tabulated value")
     lam, value, err = lam[good], value[good], err[good]
     weight = 1 / ((err / value) ** 2 + LAW_SCATTER**2)
-    prior = (LAMBDA_MAX / LAMBDA_MAX_ERR) ** 2
-    state = np.array([np.log(value.max()), np.log(LAMBDA_MAX)])
-    normal = np.eye(2)
+    prior = np.diag([0.0, (LAMBDA_MAX / LAMBDA_MAX_ERR) ** 2, K_ERR**-2])
+    usual = np.array([0.0, np.log(LAMBDA_MAX), 0.0])
+    state = np.array([np.log(value.max()), np.log(LAMBDA_MAX), 0.0])
+    normal = np.eye(3)
     for _ in range(50):
         peak = np.exp(state[1])
-        k = float(k_of(peak, law))
+        k = float(k_of(peak, law)) + state[2]
         log = state[1] - np.log(lam)
         residual = np.log(value) - (state[0] - k * log**2)
-        design = np.stack([np.ones_like(lam), -2 * k * log - K_LAWS[law][1] * peak * log**2], axis=1)
-        normal = design.T @ (weight[:, None] * design)
-        right = design.T @ (weight * residual)
-        normal[1, 1] += prior
-        right[1] += prior * (np.log(LAMBDA_MAX) - state[1])
-        step = np.linalg.solve(normal, right)
+        slope = -2 * k * log - K_LAWS[law][1] * peak * log**2
+        design = np.stack([np.ones_like(lam), slope, -(log**2)], axis=1)
+        normal = design.T @ (weight[:, None] * design) + prior
+        step = np.linalg.solve(normal, design.T @ (weight * residual) + prior @ (usual - state))
         state = state + np.clip(step, -0.2, 0.2)
         if np.max(np.abs(step)) < 1e-12:
             break
     peak = float(np.exp(state[1]))
     covariance = np.asarray(np.linalg.inv(normal), dtype=float)
-    return Curve(float(np.exp(state[0])), peak, float(k_of(peak, law)), covariance, law)
+    return Curve(float(np.exp(state[0])), peak, float(k_of(peak, law)) + float(state[2]), covariance, law)
 
 
 def transfer(

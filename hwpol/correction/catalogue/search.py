@@ -20,7 +20,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from hwpol.correction.catalogue.bands import Curve, band_name, fit_curve, k_of
+from hwpol.correction.catalogue.bands import K_ERR, Curve, band_name, fit_curve, k_of
 from hwpol.correction.catalogue.stars import Star, close_pairs, enter, separation
 from hwpol.correction.catalogue.tables import own_tables, read_table, star_key
 from hwpol.errors import ConfigError, InputError, MissingError
@@ -240,7 +240,7 @@ class Catalogue:
             ra=star.first("ra"),
             dec=star.first("dec"),
             vmag=star.first("vmag"),
-            band=band or canonical or value.rows[0].get("band", ""),
+            band=band or (value.rows[0].get("band", "") if value.method == "tabulated" else ""),
             wavelength=lam if lam is not None else self._row_wavelength(value.rows[0]),
             p=value.p,
             p_err=value.p_err,
@@ -326,7 +326,7 @@ class Catalogue:
             own = np.isfinite(row["k"])
             p_err = row["p_max_err"] if np.isfinite(row["p_max_err"]) else CURVE_P_FLOOR
             lam_err = row["lambda_max_err"] if np.isfinite(row["lambda_max_err"]) else CURVE_LAMBDA_FLOOR
-            covariance = np.diag([(p_err / row["p_max"]) ** 2, (lam_err / row["lambda_max"]) ** 2])
+            covariance = np.diag([(p_err / row["p_max"]) ** 2, (lam_err / row["lambda_max"]) ** 2, K_ERR**2])
             k = row["k"] if own else float(k_of(row["lambda_max"], self.k_law))
             law = "own" if own else self.k_law
             return Curve(row["p_max"], row["lambda_max"], k, covariance, law), [row], "serkowski"

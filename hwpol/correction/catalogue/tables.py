@@ -47,7 +47,7 @@ def star_key(name: str) -> str:
         prefix, sign, first, second, tail = zone.groups()
         degrees = f"{int(first):02d}" if second else first
         return f"{'cd' if prefix == 'cod' else prefix}{'+' if '+' in sign else ''}{degrees}{second}{tail}"
-    return normal_name(re.sub(r"(#|\bno\.?\s*(?=\d)|^v?\*\s*)", "", text))
+    return normal_name(re.sub(r"(#|\bno\.?\s*(?=\d)|^v?\*\s*)", "", text.replace("_", " ")))
 
 
 def tables_root() -> Path:

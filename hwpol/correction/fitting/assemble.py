@@ -154,7 +154,8 @@ def _items(observed: list[_Observed]) -> list[_Item]:
         for place in np.flatnonzero(np.ravel(good)):
             source = int(place) // max(int(np.prod(shape[1:])), 1)
             label = standard.name if sources == 1 else f"{standard.name or 'star'} {source + 1}"
-            key = (standard.name, source, standard.p, standard.theta) if standard.name else (order, source)
+            known = standard.star or standard.name
+            key = (known, source, standard.p, standard.theta) if known else (order, source)
             items.append(_Item(standard, stokes, int(place), numbers.setdefault(key, len(numbers)), label))
     return items
 
@@ -286,25 +287,27 @@ def _table(
     rows_in_fit = np.cumsum(selected.stars[data.star]) - 1
     number_of = len(fit.choice.kept)
     rows = []
+    where = data.where
+    everything = calibration.apply(
+        Stokes(
+            q=data.z.real,
+            u=data.z.imag,
+            covariance=data.covariance,
+            frame="instrument",
+            filter=name,
+            position_angle=where.chi,
+            parallactic=where.eta,
+            sense=where.sense,
+            x=_pixel(where.x, model.field_range[0]),
+            y=_pixel(where.y, model.field_range[1]),
+            mjd=None if np.isnan(model.epoch) else model.epoch + where.days,
+        )
+    )
     for k, item in enumerate(items):
         star = int(data.star[k])
         taken = bool(selected.stars[star])
         standard = item.standard
-        where = data.where
-        single = Stokes(
-            q=data.z[k].real,
-            u=data.z[k].imag,
-            covariance=data.covariance[k],
-            frame="instrument",
-            filter=name,
-            position_angle=where.chi[k],
-            parallactic=where.eta[k],
-            sense=where.sense,
-            x=_pixel(where.x[k], model.field_range[0]),
-            y=_pixel(where.y[k], model.field_range[1]),
-            mjd=None if np.isnan(model.epoch) else model.epoch + where.days[k],
-        )
-        sky = calibration.apply(single)
+        sky = everything[k]
         used = taken and bool(fit.choice.kept[number[star]])
         departure = float(fit.departure[number[star]]) if taken else float("nan")
         chance = float(fit.choice.chance[number[star]]) if taken else 1.0
@@ -355,7 +358,7 @@ def _table(
     return rows
 
 
-def _pixel(scaled: float, limits: Array) -> Array:
+def _pixel(scaled: Array, limits: Array) -> Array:
     return np.asarray(limits.mean() + scaled * np.ptp(limits) / 2)
 
 

@@ -57,7 +57,7 @@ def fit_model(data: Data, names: tuple[str, ...], active: set[str], mode: str, e
     for round_ in range(20):
         linear = linearise(data, names, ip, amplitude)
         frame = free_frame(names, active, amplitude, mode)
-        if round_ < 3 or choice is None:
+        if choice is None or round_ < 2:
             choice = choose(data, linear, frame)
         sums = choice.apply(add_up(data, linear, choice.scatter))
         solution = solve(sums, frame, choice.kept)
@@ -72,7 +72,7 @@ def fit_model(data: Data, names: tuple[str, ...], active: set[str], mode: str, e
                 amplitude *= efficiency / abs(amplitude)
                 theta = np.concatenate([theta[:-2], [amplitude.real, amplitude.imag]])
         solution = replace(solution, theta=theta)
-        if step < 1e-13 and round_ > 2:
+        if step < 1e-13 and round_ > 1:
             break
     assert choice is not None
     predicted, departure = _predict(data, linear, frame, add_up(data, linear, choice.scatter), choice)

@@ -29,32 +29,40 @@ BAD_SHARE = 4
 DISTINCT = 6.0
 
 
-def scatter_of(data: Data, linear: Linear, frame: Frame, kept: NDArray[np.bool_]) -> tuple[float, float]:
+def scatter_of(
+    data: Data,
+    linear: Linear,
+    frame: Frame,
+    kept: NDArray[np.bool_],
+    near: tuple[float, float] | None = None,
+    place: int | None = None,
+) -> tuple[float, float]:
     """Intrinsic scatter per component of (zero-polarised, polarised) stars by restricted maximum likelihood.
 
-    A class of fewer than three stars gets none.
+    A class of fewer than three stars gets none. With `near` and `place` only the scatter of one class is sought,
+    about a value known to be close.
     """
     classes = [~data.polarised & kept, data.polarised & kept]
-    active = [k for k in range(2) if classes[k].sum() >= 3]
-    scatter = [0.0, 0.0]
+    active = [k for k in range(2) if classes[k].sum() >= 3 and place in (None, k)]
+    scatter = [*(near or (0.0, 0.0))]
 
-    def cost(value: float, place: int) -> float:
+    def cost(value: float, k: int) -> float:
         trial = [*scatter]
-        trial[place] = value
+        trial[k] = value
         sums = add_up(data, linear, (trial[0], trial[1]))
         fit = solve(sums, frame, kept)
         inner = frame.turn.T @ sums.normal[kept].sum(axis=0) @ frame.turn
         return float(sums.logdet[kept].sum() + np.linalg.slogdet(inner)[1] + fit.chi2)
 
-    for _ in range(len(active)):
-        for place in active:
-            size = max(float(np.sqrt(np.median(_expected(data, classes[place])))), 1e-6)
+    for _ in range(1 if near else len(active)):
+        for k in active:
+            size = near[k] if near else max(float(np.sqrt(np.median(_expected(data, classes[k])))), 1e-6)
             found = minimize_scalar(
-                lambda log, place=place, size=size: cost(size * np.exp(log), place),
-                bounds=(-2.0, 6.0), method="bounded", options={"xatol": 0.05},
+                lambda log, k=k, size=size: cost(size * np.exp(log), k),
+                bounds=(-2.0, 1.0) if near else (-2.0, 6.0), method="bounded", options={"xatol": 0.1},
             )  # fmt: skip
             value = size * float(np.exp(found.x))
-            scatter[place] = value if found.fun < cost(0.0, place) else 0.0
+            scatter[k] = value if found.fun < cost(0.0, k) else 0.0
     return (scatter[0], scatter[1])
 
 
@@ -208,7 +216,8 @@ def _scattered(data: Data, linear: Linear, frame: Frame, kept: NDArray[np.bool_]
         peers = int((others & (data.polarised == data.polarised[star])).sum())
         if peers < 3 or not common[int(data.polarised[star])]:
             continue
-        tables = add_up(data, linear, common if many else scatter_of(data, linear, frame, others))
+        own = common if many else scatter_of(data, linear, frame, others, common, int(data.polarised[star]))
+        tables = add_up(data, linear, own)
         gain, values, without = gains(tables, frame, kept)
         if without.determined[star]:
             out[star] = f_distribution.sf(gain[star] / values[star], values[star], 2 * (peers - 1))
