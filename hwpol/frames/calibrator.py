@@ -13,6 +13,7 @@ from typing import Any, Protocol
 import numpy as np
 from astropy.table import Table
 from numpy.typing import NDArray
+from scipy import ndimage
 
 from hwpol.errors import InputError
 from hwpol.frames.doubts import gain_unknown, missing, pedestal_unknown
@@ -213,10 +214,10 @@ class Calibrator:
         for section in (trim, own.section):
             _close(mask, raw.box, section)
         if self.cosmic_rays == "frames" and data.size:
-            hits = find_hits(data, variance)
-            mask[hits & (mask & np.uint8(PixelMask.SATURATED | PixelMask.OUTSIDE) == 0)] |= np.uint8(
-                PixelMask.COSMIC_RAY
-            )
+            # The edge of the light is as sharp as a hit.
+            edge = ndimage.binary_dilation(mask & np.uint8(PixelMask.OUTSIDE), np.ones((3, 3)))
+            hits = find_hits(data, variance) & ~edge
+            mask[hits & (mask & np.uint8(PixelMask.SATURATED) == 0)] |= np.uint8(PixelMask.COSMIC_RAY)
         result = Pixels(data, variance, mask, raw.box.x0, raw.box.y0)
         return result if wanted is None else result.cut(wanted)
 
