@@ -37,6 +37,9 @@ class Foreground:
         Its error, without the part the calibration shares with the targets.
     shared : ndarray, shape (2, 2)
         That part, for a mean of calibrated field stars; zero for a value given.
+    slopes : ndarray, shape (2, parameters), or None
+        Of q, u with the parameters of the calibration in `filter`, for a mean of field stars.
+    filter : str
     wavelength : float
         Micron; NaN where not known.
     stars, scatter : int, float
@@ -50,6 +53,8 @@ class Foreground:
     covariance: Array
     shared: Array
     wavelength: float = float("nan")
+    slopes: Array | None = None
+    filter: str = ""
     stars: int = 0
     scatter: float = 0.0
     note: str = ""
@@ -115,11 +120,15 @@ class Foreground:
             raise InputError(f"foreground from the field: {int(good.sum())} usable stars, expected at least 2")
         good[good] = _together(values[good], covariance[good])
         scatter, mean, error, weights = _mean(values[good], covariance[good])
-        shared = np.zeros((2, 2))
+        shared, slopes, name = np.zeros((2, 2)), None, stars[0].filter
         if calibration is not None:
-            full = calibration.shared_covariance(stars)[good][:, :, good]
-            shared = np.einsum("nab,nbmc,mdc->ad", weights, full, weights)
-        out = Foreground(float(mean[0]), float(mean[1]), error, shared, wavelength, int(good.sum()), scatter)
+            each = [calibration.sky_jacobian(s) for s in stars]
+            flat = np.concatenate([j.reshape(-1, *j.shape[-2:]) for j in each])[good]
+            slopes = np.einsum("nab,nbp->ap", weights, flat)
+            shared = slopes @ calibration.model(name).covariance @ slopes.T
+        out = Foreground(
+            float(mean[0]), float(mean[1]), error, shared, wavelength, slopes, name, int(good.sum()), scatter
+        )
         return replace(out, note=excess_note(out.p, reddening))
 
     def at(self, wavelength: float, *, lambda_max: float = LAMBDA_MAX, law: str = "whittet") -> Foreground:
@@ -141,15 +150,17 @@ class Foreground:
             u=self.u * ratio,
             covariance=self.covariance * ratio**2 + (np.outer(along, along) if p > 0 else 0.0),
             shared=self.shared * ratio**2,
+            slopes=None if self.slopes is None else self.slopes * ratio,
             wavelength=wavelength,
         )
 
-    def subtract(self, stokes: Stokes) -> Stokes:
+    def subtract(self, stokes: Stokes, calibration: Calibration | None = None) -> Stokes:
         """Remove the foreground from values on the sky.
 
-        Its own error joins the random covariance. What a field mean shares with the targets through the calibration
-        is kept in `calibration_covariance` as if independent, which is never too small. A foreground larger than three
-        times the error that remains is flagged.
+        Its own error joins the random covariance. What a field mean and the target of the same filter share through
+        the `calibration` (an error of ip moves both alike) is taken together; without it, or in another filter, the
+        two parts of `calibration_covariance` add up. A foreground larger than three times the error that remains is
+        flagged.
 
         Raises
         ------
@@ -160,11 +171,13 @@ class Foreground:
             raise InputError("foreground: the values are in the instrument frame; calibrate them first")
         covariance = stokes.covariance.copy()
         covariance[..., :2, :2] += self.covariance
-        calibration = self.shared if stokes.calibration_covariance is None else stokes.calibration_covariance
-        if stokes.calibration_covariance is not None:
-            calibration = calibration + self.shared
+        if calibration is not None and self.slopes is not None and stokes.filter == self.filter:
+            slopes = calibration.sky_jacobian(stokes) - self.slopes
+            shared = slopes @ calibration.model(stokes.filter).covariance @ np.swapaxes(slopes, -1, -2)
+        else:
+            shared = self.shared + (0.0 if stokes.calibration_covariance is None else stokes.calibration_covariance)
         out = replace(
-            stokes, q=stokes.q - self.q, u=stokes.u - self.u, covariance=covariance, calibration_covariance=calibration
+            stokes, q=stokes.q - self.q, u=stokes.u - self.u, covariance=covariance, calibration_covariance=shared
         )
         error = np.sqrt(np.trace(out.total_covariance, axis1=-2, axis2=-1) / 2)
         dominated = np.where(self.p > DOMINATES * error, int(Flag.FOREGROUND_DOMINATES), 0)

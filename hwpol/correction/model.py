@@ -229,7 +229,12 @@ class FilterModel:
         y: ArrayLike | None = None,
         mjd: ArrayLike | None = None,
     ) -> Setting:
-        """Bring what describes observations to one shape S, x and y scaled to this model's field."""
+        """Bring what describes observations to one shape S, x and y scaled to this model's field.
+
+        A drift is not carried beyond the standards' times.
+        """
+        if mjd is not None and np.isfinite(self.mjd).all():
+            mjd = np.clip(np.asarray(mjd, dtype=float), *self.mjd)
         return setting(shape, chi, eta, sense, x, y, mjd, self.field_range, self.epoch)
 
     def ip(self, where: Setting) -> Complex:

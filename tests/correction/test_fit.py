@@ -147,6 +147,9 @@ def test_drift_only_when_the_data_demand_it(bench):
     assert drifting.names[-4:-2] == ("ip_q_t", "ip_u_t")
     assert abs(drifting.value("ip_q_t") - 0.02) < 5 * drifting.error("ip_q_t")
     assert drifting.epoch == pytest.approx(61000.2)
+    # Not carried beyond the standards' times.
+    late, end = (drifting.ip(drifting.setting((), 20.0, None, 1, mjd=t)) for t in (61000.9, 61000.4))
+    assert complex(late) == complex(end)
     assert "ip_q_t" not in Calibration.fit(steady).filters["V"].names
 
 

@@ -65,8 +65,23 @@ def test_field_mean_keeps_the_calibration_error(bench):
     # 400 stars of 1e-4 average to 5e-6; the zero star's 5e-4 stays.
     assert np.sqrt(found.covariance[0, 0]) < 6e-6
     assert np.sqrt(found.total_covariance[0, 0]) > 3e-4
-    left = found.subtract(calibration.apply(b.observe(0.03, 80.0)))
-    assert left.calibration_covariance[0, 0] > alone[0, 0]
+    target = calibration.apply(b.observe(0.03, 80.0))
+    apart = found.subtract(target).calibration_covariance
+    np.testing.assert_allclose(apart, target.calibration_covariance + found.shared, rtol=1e-12)
+    # An error of ip moves target and field alike and drops out of the difference; that of A stays.
+    together = found.subtract(target, calibration).calibration_covariance
+    assert np.trace(together) < np.trace(apart) / 3
+    gain_only = calibration.model("V").covariance[-2:, -2:]
+    assert np.trace(together) > 0.5 * 0.02**2 * np.trace(gain_only) / 0.985**2
+
+
+def test_difference_to_a_field_star_of_the_same_light_has_no_calibration_error(bench):
+    b = bench()
+    calibration = Calibration.fit([b.zero("z", cat_err=5e-4), b.pol("p", 0.05, 20)])
+    stars = calibration.apply(b.observe(np.full(3, 0.02), 30.0))
+    left = Foreground.of_field([stars], calibration).subtract(stars, calibration)
+    # What is left of 2e-7 is rounding.
+    assert np.abs(left.calibration_covariance).max() < 1e-18
 
 
 def test_transfer_between_bands():

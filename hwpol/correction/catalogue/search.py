@@ -296,7 +296,7 @@ class Catalogue:
         err = row["p_err"]
         if not np.isfinite(err):
             err = max(p, ZERO_LEAST) if np.isfinite(row["p"]) else ZERO_FLOOR * np.sqrt(2)
-        return _Value(p, err, float("nan"), float("nan"), "tabulated", [row])
+        return _Value(p, float(err), float("nan"), float("nan"), "tabulated", [row])
 
     def _value(self, star: Star, band: str | None, lam: float | None) -> _Value | None:
         rows = [row for row in star.rows if np.isfinite(row["p"])]
