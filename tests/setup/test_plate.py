@@ -158,3 +158,9 @@ def test_acquisition_images_without_the_keyword_do_not_hide_it() -> None:
     columns = others(3, 2, 4)
     columns["Z9"] = [22.5 * ((i // 2) % 4) if i % 2 else None for i in range(24)]
     assert found(table(columns))["keywords.wave_plate"].value == "Z9"
+
+
+def test_a_telling_name_is_not_enough() -> None:
+    columns = others(4, 2, 4)
+    columns["WPROT"] = [22.5 * (i // 8) for i in range(32)]  # set once for each target
+    assert found(table(columns))["keywords.wave_plate"].value is None
