@@ -241,7 +241,7 @@ def _judge(
     else:
         axis = (1, 2)
     ranked = np.where(known.any(axis=axis, keepdims=True), relative, 0.0)
-    common = np.nanmedian(ranked, axis=axis, keepdims=True)
+    common = np.nanmedian(ranked, axis=axis, keepdims=True) if frames > 1 else np.zeros((count, 1, 1, pixels))
     n = np.maximum(known.sum(axis=axis, keepdims=True), 1)
     residual = np.where(known, residual - level * common, 0.0)
     error2 = variance * (1.0 + 1.57 / n)

@@ -95,7 +95,7 @@ def test_hits_are_found_and_nothing_else(star: Callable[..., np.ndarray], flux: 
 @pytest.mark.parametrize(("flux", "fwhm"), [(1e3, 2.7), (3e4, 2.7), (1e6, 2.7), (3e4, 4.0), (1e6, 4.0), (1e6, 8.0)])
 def test_rates_over_seeing_and_brightness(star: Callable[..., np.ndarray], kind: str, flux: float, fwhm: float) -> None:
     """Bounds are the demand (99 of 100, 2 in 1000 apertures) plus 2.3 sigma of the counting of this sample."""
-    found, hit, dropped, clean = rates(star, 2, 40, flux=flux, fwhm=fwhm, kind=kind)
+    found, hit, dropped, clean = rates(star, 2, 24, flux=flux, fwhm=fwhm, kind=kind)
     assert hit - found <= 0.01 * hit + 2.3 * np.sqrt(0.01 * hit) + 1
     assert dropped <= 0.002 * 2 * clean + 2.3 * np.sqrt(0.002 * 2 * clean)
 
