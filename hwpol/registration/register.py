@@ -178,7 +178,7 @@ def _with_stars(
     solution = best_motion(places, errors, template, maps, shift, rotation, pivot)
     wander, sigma = beam_wander(solution, errors)
     size = float(np.sqrt(np.mean(wander**2)))
-    if sigma > _WANDER_SIGMA and size > _WANDER_PIXELS:
+    if method == "stars" and sigma > _WANDER_SIGMA and size > _WANDER_PIXELS:
         notes.append(f"the beams move against each other by {size:.3f} pixel rms from frame to frame: each is followed")
         for _ in range(3):
             solution = best_motion(places - wander[:, :, None], errors, template, maps, shift, rotation, pivot)
