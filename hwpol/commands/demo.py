@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from hwpol.commands import DONE, FAILED
+from hwpol.commands.reduce import draw_page
 from hwpol.commands.running import add_execution, executor_for
 from hwpol.commands.screen import Steps, calibration_lines, degrees, percent, table, with_error
 
@@ -34,6 +35,7 @@ def run(options: argparse.Namespace) -> int:
     night = Night.read(simulated.night_path)
     with executor_for(options) as executor:
         answer = night.reduce(executor=executor, progress=Steps(options.quiet))
+    draw_page(night)
     truth = {(str(t["target"]), str(t["filter"])): t for t in simulated.truth if t["source"] == 0}
     rows: list[list[str]] = []
     pulls: list[float] = []

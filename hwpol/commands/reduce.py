@@ -26,8 +26,21 @@ def run(options: argparse.Namespace) -> int:
     night = Night.read(options.night)
     with executor_for(options) as executor:
         answer = night.reduce(executor=executor, only=options.only, fresh=options.fresh, progress=Steps(options.quiet))
+    draw_page(night)
     print_answer(answer, night, quiet=options.quiet)
     return DONE if answer.clean else ASIDE
+
+
+def draw_page(night: object) -> None:
+    """Draw the page from the products just written, unless the night file says not to."""
+    config = night.config  # type: ignore[attr-defined]
+    if config.products.report:
+        from hwpol.report import write_report
+
+        write_report(config.output)
+    else:
+        # A page of an earlier run would show other numbers than the tables beside it.
+        (config.output / "report.html").unlink(missing_ok=True)
 
 
 def print_answer(answer: object, night: object, *, quiet: bool = False) -> None:
