@@ -3,18 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike
 
 from hwpol.correction.calibration import Calibration
+from hwpol.correction.fitting.gather import Gathered, Item, Observed, gather
 from hwpol.correction.fitting.least_squares import Data
 from hwpol.correction.fitting.one_model import Fit
 from hwpol.correction.fitting.robust import SCATTER_ALARM
 from hwpol.correction.fitting.selection import Selected, select
-from hwpol.correction.model import Array, FilterModel, setting
+from hwpol.correction.model import Array, FilterModel
 from hwpol.correction.standard import Solver, Standard
 from hwpol.errors import InputError
 from hwpol.flags import Flag
@@ -22,25 +23,6 @@ from hwpol.stokes import Stokes, angle_difference, instrument_from_sky, observed
 
 #: Rounds in which standards measured as Fluxes are solved again with the calibration they gave.
 FLUX_ROUNDS = 4
-
-
-@dataclass(frozen=True)
-class _Observed:
-    """A standard with its resolved values."""
-
-    standard: Standard
-    stokes: Stokes
-
-
-@dataclass(frozen=True)
-class _Item:
-    """One observation: its standard, place in the standard's Stokes, number and name of its star."""
-
-    standard: Standard
-    stokes: Stokes
-    place: int
-    star: int
-    name: str
 
 
 def fit_calibration(
@@ -59,7 +41,7 @@ def fit_calibration(
         raise InputError("Calibration.fit: no standards; observe at least one zero-polarised and one polarised star")
     if field_order != "best" and not (isinstance(field_order, int) and 0 <= field_order <= 6):
         raise InputError(f'field_order = {field_order!r}: expected 0 to 6, or "best"')
-    observed = [_Observed(s, _resolve(s, None, solver)) for s in standards]
+    observed = [Observed(s, _resolve(s, None, solver)) for s in standards]
     for item in observed:
         if item.stokes.frame != "instrument":
             raise InputError(
@@ -68,7 +50,7 @@ def fit_calibration(
             )
     _one_role(standards)
 
-    def fit(items: list[_Observed]) -> Calibration:
+    def fit(items: list[Observed]) -> Calibration:
         filters: dict[str, FilterModel] = {}
         rows: list[dict[str, Any]] = []
         for name in dict.fromkeys(item.stokes.filter for item in items):
@@ -83,7 +65,7 @@ def fit_calibration(
         return calibration
     for _ in range(FLUX_ROUNDS):
         before = np.concatenate([m.values for m in calibration.filters.values()])
-        observed = [_Observed(s, _observed_again(s, o.stokes, calibration, solver)) for s, o in
+        observed = [Observed(s, _observed_again(s, o.stokes, calibration, solver)) for s, o in
                     zip(standards, observed, strict=True)]  # fmt: skip
         calibration = fit(observed)
         after = np.concatenate([m.values for m in calibration.filters.values()])
@@ -143,105 +125,26 @@ def _level(efficiency: float | str | Mapping[str, float], name: str) -> float | 
     return float(value)
 
 
-def _items(observed: list[_Observed]) -> list[_Item]:
-    numbers: dict[Any, int] = {}
-    items = []
-    for order, item in enumerate(observed):
-        stokes, standard = item.stokes, item.standard
-        shape = stokes.shape or (1,)
-        sources = shape[0]
-        good = np.isfinite(stokes.z) & np.isfinite(stokes.random_covariance).all(axis=(-1, -2))
-        for place in np.flatnonzero(np.ravel(good)):
-            source = int(place) // max(int(np.prod(shape[1:])), 1)
-            label = standard.name if sources == 1 else f"{standard.name or 'star'} {source + 1}"
-            known = standard.star or standard.name
-            key = (known, source, standard.p, standard.theta) if known else (order, source)
-            items.append(_Item(standard, stokes, int(place), numbers.setdefault(key, len(numbers)), label))
-    return items
-
-
-def _per_value(items: list[_Item], name: str) -> Array:
-    """One number per observation of an attribute of its Stokes, NaN where not known."""
-    out = np.full(len(items), np.nan)
-    spread: dict[int, Array] = {}
-    for k, item in enumerate(items):
-        value = getattr(item.stokes, name)
-        if value is None:
-            continue
-        if id(item.stokes) not in spread:
-            array = np.asarray(value, dtype=float)
-            missing = len(item.stokes.shape) - array.ndim
-            if name in {"x", "y"} and array.ndim and missing:
-                array = array.reshape(array.shape + (1,) * missing)
-            spread[id(item.stokes)] = np.broadcast_to(array, item.stokes.shape).ravel()
-        out[k] = spread[id(item.stokes)][item.place]
-    return out
-
-
 def _fit_filter(
     name: str,
-    observed: list[_Observed],
+    observed: list[Observed],
     frame: str,
     field_order: int | str,
     efficiency: float | None,
     field_range: ArrayLike | None,
 ) -> tuple[FilterModel, list[dict[str, Any]]]:
-    items = _items(observed)
-    if not items:
-        raise InputError(f"filter {name!r}: none of its standards has finite q, u and covariance")
-    senses = {item.stokes.sense for item in items}
-    if len(senses) > 1:
-        raise InputError(f"filter {name!r}: standards with and without mirroring (sense 1 and -1) cannot be mixed")
-    chi, eta, x, y, mjd = (_per_value(items, n) for n in ("position_angle", "parallactic", "x", "y", "mjd"))
-    if frame != "instrument" and np.any(np.isnan(eta)):
-        missing = next(item.name for item, value in zip(items, eta, strict=True) if np.isnan(value))
-        raise InputError(
-            f'standard {missing}, filter {name!r}: frame = "{frame}" needs its parallactic angle; give the site and '
-            f'positions, or use frame = "instrument"'
-        )
-    limits = _field_range(x, y, field_range, field_order)
-    times = mjd[np.isfinite(mjd)]
-    epoch = float(times.min() + times.max()) / 2 if times.size else float("nan")
-    z = np.array([item.stokes.z.ravel()[item.place] for item in items])
-    covariance = np.array([item.stokes.random_covariance.reshape(-1, 2, 2)[item.place] for item in items])
-    stars = {item.star: item for item in reversed(items)}
-    order = sorted(stars)
-    number = {star: k for k, star in enumerate(order)}
-    data = Data(
-        z,
-        covariance,
-        np.array([number[item.star] for item in items]),
-        setting(z.shape, chi, eta, senses.pop(), x, y, mjd, limits, epoch),
-        np.array([stars[star].standard.z for star in order]),
-        np.array([stars[star].standard.z_covariance for star in order]),
-    )
+    gathered = gather(name, observed, frame, field_order, field_range)
+    data, items = gathered.data, gathered.items
     selected = select(data, frame, field_order, efficiency)
-    model = _model(selected, data, [stars[star] for star in order], frame, limits, epoch, times)
+    model = _model(selected, gathered, frame)
     return model, _table(name, model, selected, data, items)
 
 
-def _field_range(x: Array, y: Array, given: ArrayLike | None, order: int | str) -> Array:
-    if given is not None:
-        limits = np.asarray(given, dtype=float)
-        if limits.shape != (2, 2) or not np.all(limits[:, 1] > limits[:, 0]):
-            raise InputError(f"field_range = {given!r}: expected [[x0, x1], [y0, y1]] in pixels with x0 < x1, y0 < y1")
-        return limits
-    if not (np.isfinite(x).any() and np.isfinite(y).any()):
-        if order not in (0, "best"):
-            raise InputError(f"field_order = {order}: the standards' x and y are not known; give them, or use 0")
-        return np.array([[-1.0, 1.0], [-1.0, 1.0]])
-    limits = np.array([[np.nanmin(v), np.nanmax(v)] for v in (x, y)])
-    return np.where(np.ptp(limits, axis=1)[:, None] > 0, limits, limits + np.array([-1.0, 1.0]))
-
-
-def _model(
-    selected: Selected, data: Data, stars: list[_Item], frame: str, limits: Array, epoch: float, times: Array
-) -> FilterModel:
-    fit = selected.fit
+def _model(selected: Selected, gathered: Gathered, frame: str) -> FilterModel:
+    fit, stars, times = selected.fit, gathered.stars, gathered.times
     solution, kept = fit.solution, fit.choice.kept
     flags = Flag(0)
-    ip_held = [n for n in selected.held if n.startswith(("ip_", "tel_"))]
-    if ip_held:
+    if {"ip_q", "tel_q"} & set(selected.held):
         flags |= Flag.IP_UNCALIBRATED
     if "a_re" in selected.held:
         flags |= Flag.ANGLE_UNCALIBRATED | Flag.EFFICIENCY_ASSUMED
@@ -260,8 +163,8 @@ def _model(
         names=fit.names,
         values=solution.theta,
         covariance=solution.covariance * scale,
-        field_range=limits,
-        epoch=epoch if selected.drift else float("nan"),
+        field_range=gathered.limits,
+        epoch=gathered.epoch if selected.drift else float("nan"),
         frame=frame,
         held=selected.held,
         chi2=solution.chi2,
@@ -279,7 +182,7 @@ def _reason(fit: Fit, star: int) -> str:
 
 
 def _table(
-    name: str, model: FilterModel, selected: Selected, data: Data, items: list[_Item]
+    name: str, model: FilterModel, selected: Selected, data: Data, items: list[Item]
 ) -> list[dict[str, Any]]:
     fit = selected.fit
     calibration = Calibration({name: model})

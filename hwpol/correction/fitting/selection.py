@@ -151,7 +151,7 @@ def select(data: Data, frame: str, field_order: int | str, efficiency: float | N
         fit = fit_model(part, names, active, how, level)
         if usable(fit):
             drift = _with_drift(part, frame, names, active, how, level, fit)
-            held = _held(names, active, how)
+            held = (*_held(names, active, how), *(n for n in term_names(frame, highest) if n not in names))
             return Selected(drift or fit, stars, held, drift is not None, validation)
     fit = fit_model(data, flat, set(), "held", level)
     return Selected(fit, everyone, _held(flat, set(), "held"), False, validation)
