@@ -104,7 +104,7 @@ def test_rates_over_seeing_and_brightness(star: Callable[..., np.ndarray], kind:
 def test_a_neighbour_whose_light_follows_the_seeing_is_no_hit(
     star: Callable[..., np.ndarray], neighbour: tuple[float, float, int]
 ) -> None:
-    _, _, dropped, clean = rates(star, 3, 8, flux=1e5, fwhm=4.0, rate=0.0, neighbour=neighbour)
+    _, _, dropped, clean = rates(star, 3, 5, flux=1e5, fwhm=4.0, rate=0.0, neighbour=neighbour)
     assert dropped <= 0.02 * clean
 
 
