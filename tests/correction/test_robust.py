@@ -122,8 +122,12 @@ def test_unknown_scatter_is_found(bench):
 
 def test_two_that_disagree_are_both_kept(bench):
     b = bench()
-    model = Calibration.fit([b.zero("a"), b.zero("b", true=0.003)]).filters["V"]
+    calibration = Calibration.fit([b.zero("a"), b.zero("b", true=0.003)])
+    model = calibration.filters["V"]
     assert model.left_out == ()
+    for row in calibration.standards_table():
+        assert row["used"]
+        assert "too few to tell which of them is wrong" in row["doubt"]
     # Neither can be believed: the error grows to half their distance.
     assert model.error("ip_q") > 0.0009
     assert (model.dof, model.chi2 > 10) == (2, True)

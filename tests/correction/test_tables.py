@@ -2,10 +2,17 @@
 
 from __future__ import annotations
 
+import os
+import shutil
+import subprocess
+import sys
+from pathlib import Path
+
 import numpy as np
 import pytest
 from astropy.table import Table
 
+import hwpol
 from hwpol.correction.catalogue.stars import separation
 from hwpol.correction.catalogue.tables import (
     BAND_COLUMNS,
@@ -20,6 +27,21 @@ from hwpol.errors import ConfigError
 
 # Positions of one star in two files come from the same row of one source: they agree to its last digit (1e-6 deg).
 SAME_POSITION = 0.01  # arcsec
+
+
+def test_tables_of_the_source_tree_go_first():
+    """An editable installation may hold a stale copy; the tree's own folder is read."""
+    assert tables_root() == Path(hwpol.__file__).parents[1] / "calib_tables"
+
+
+def test_tables_inside_an_installed_package(tmp_path):
+    package = tmp_path / "hwpol"
+    shutil.copytree(Path(hwpol.__file__).parent, package, ignore=shutil.ignore_patterns("__pycache__"))
+    shutil.copytree(tables_root(), package / "calib_tables")
+    code = "from hwpol.correction.catalogue.tables import own_tables; print(own_tables()[0].path)"
+    done = subprocess.run([sys.executable, "-c", code], cwd=tmp_path, capture_output=True, text=True, check=True,
+                          env={**os.environ, "PYTHONPATH": str(tmp_path)})  # fmt: skip
+    assert done.stdout.strip() == str(package / "calib_tables" / "polarised.ecsv")
 
 
 def rows(name):

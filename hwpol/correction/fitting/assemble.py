@@ -23,6 +23,8 @@ from hwpol.stokes import Stokes, angle_difference, instrument_from_sky, observed
 
 #: Rounds in which standards measured as Fluxes are solved again with the calibration they gave.
 FLUX_ROUNDS = 4
+#: Departure (sigma) from which a standard is doubted even where the others are too few to blame it.
+SUSPECT = 3.0
 
 
 def fit_calibration(
@@ -225,6 +227,8 @@ def _table(
             doubt = next(reason for who, reason in model.left_out if who == item.name)
         elif chance * number_of < 0.05:
             doubt = f"differs from what the other standards predict by {departure:.1f} sigma; kept"
+        elif departure > SUSPECT:
+            doubt = f"disagrees by {departure:.1f} sigma; the standards are too few to tell which of them is wrong"
         rows.append(
             {
                 "name": item.name,
