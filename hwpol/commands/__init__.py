@@ -70,20 +70,19 @@ def _parser() -> argparse.ArgumentParser:
         formatter_class=argparse.RawDescriptionHelpFormatter,
         usage="hwpol COMMAND ...",
     )
-    parser.add_argument("--version", action="version", version=_Version())
+    parser.add_argument("--version", action=_Version, nargs=0, help="print the version")
     parser.add_argument("verb", nargs="?", choices=VERBS, metavar="COMMAND", help=argparse.SUPPRESS)
     return parser
 
 
-class _Version(str):
-    """The version, looked up only when it is printed."""
+class _Version(argparse.Action):
+    """Prints the version, looked up only then."""
 
-    __slots__ = ()
-
-    def __mod__(self, _: object) -> str:
+    def __call__(self, parser: argparse.ArgumentParser, *_: object) -> None:
         from importlib.metadata import version
 
-        return f"hwpol {version('hwpol')}"
+        print(f"hwpol {version('hwpol')}")
+        parser.exit()
 
 
 def _guarded(run: object, options: argparse.Namespace) -> int:

@@ -40,7 +40,7 @@ def explain(name: str) -> list[str]:
     if not found:
         near = difflib.get_close_matches(wanted, known, n=3, cutoff=0.5)
         raise MissingError(f"{name}: no column, flag or setting of that name; nearest: {', '.join(near) or 'none'}")
-    return found
+    return [textwrap.fill(text, 100, subsequent_indent="  ", break_on_hyphens=False) for text in found]
 
 
 def _everything() -> list[tuple[str, str]]:
@@ -59,22 +59,14 @@ def _everything() -> list[tuple[str, str]]:
     for (label, text), where in columns.items():
         column = texts[label, text]
         unit = f", {column.unit}" if column.unit else ""
-        entries.append((label, _wrap(f"column {label} of {', '.join(where)} ({column.kind}{unit}): {text}.")))
+        entries.append((label, f"column {label} of {', '.join(where)} ({column.kind}{unit}): {text}."))
     for flag, text in FLAG_TEXT.items():
         assert flag.name is not None
-        entries.append((flag.name, _wrap(f"flag {flag.name.lower()} (bit value {int(flag)}): {text}.")))
+        entries.append((flag.name, f"flag {flag.name.lower()} (bit value {int(flag)}): {text}."))
     for place, keys in (("instrument file", reading.known_keys()), ("night file", config.known_keys())):
         for label, info in keys.items():
             default = "" if info.default is None else f" Default: {info.default!r}."
             needed = " Required." if info.required else ""
-            entries.append(
-                (
-                    label,
-                    _wrap(f"setting {label} of the {place}: {info.help} Expected: {info.expected}.{default}{needed}"),
-                )
-            )
+            said = f"setting {label} of the {place}: {info.help} Expected: {info.expected}.{default}{needed}"
+            entries.append((label, said))
     return entries
-
-
-def _wrap(text: str) -> str:
-    return textwrap.fill(text, 100, subsequent_indent="  ")

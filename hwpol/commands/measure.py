@@ -28,12 +28,16 @@ def run(options: argparse.Namespace) -> int:
 
     import hwpol
     from hwpol.commands.screen import notes
+    from hwpol.errors import InputError
     from hwpol.flags import flag_names
     from hwpol.night.solve import solve_visit
 
     instrument = hwpol.Instrument.read(options.instrument)
     calibration = hwpol.Calibration.read(options.calibration) if options.calibration else None
     frames = hwpol.FrameSet.read(options.frame, instrument)
+    aside = frames.table[frames.column("status") != "used"]
+    if not len(frames.science()) and len(aside):
+        raise InputError("no frame can be used: " + "; ".join(f"{row['name']}: {row['reason']}" for row in aside))
     fluxes = hwpol.photometer(frames, [tuple(options.at)], radius=options.radius, annulus=options.annulus)
     if calibration is not None:
         calibration.check_instrument(instrument.name)
@@ -65,7 +69,6 @@ def run(options: argparse.Namespace) -> int:
         from hwpol.flags import FLAG_TEXT, Flag
 
         print("\n" + notes([FLAG_TEXT[Flag[name.upper()]] for name in flags], "Remarks"))
-    aside = frames.table[frames.column("status") != "used"]
     for row in aside:
         print(f"not used: {row['name']}: {row['reason']}")
     return ASIDE if len(aside) or not np.isfinite(stokes.q[0]) else DONE

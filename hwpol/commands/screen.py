@@ -67,12 +67,15 @@ def degrees(value: float, error: float) -> str:
 
 
 def table(head: Sequence[str], rows: Iterable[Sequence[str]], left: int = 2) -> str:
-    """Columns of text, the first `left` of them set flush left, the others flush right."""
+    """Columns of text, the first `left` of them and remarks set flush left, the others flush right."""
     lines = [list(head), *[list(row) for row in rows]]
     widths = [max(len(line[c]) for line in lines) for c in range(len(head))]
     shown = []
     for number, line in enumerate(lines):
-        cells = [t.ljust(w) if c < left else t.rjust(w) for c, (t, w) in enumerate(zip(line, widths, strict=True))]
+        cells = [
+            t.ljust(w) if c < left or head[c] == "remarks" else t.rjust(w)
+            for c, (t, w) in enumerate(zip(line, widths, strict=True))
+        ]
         shown.append("  ".join(cells).rstrip())
         if number == 0:
             shown.append("  ".join("-" * w for w in widths))

@@ -8,7 +8,7 @@ from typing import Any
 
 from hwpol.commands import DONE
 from hwpol.commands.screen import Steps
-from hwpol.errors import InputError
+from hwpol.errors import ConfigError, InputError
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -30,6 +30,8 @@ def make_night(scenario: str, folder: str, *, jobs: int, quiet: bool) -> Any:
     """Simulate a scenario, by path or shipped name, into a folder that must be new or empty."""
     from hwpol.simulate import Scenario, shipped_scenarios, simulate
 
+    if jobs < 0:
+        raise ConfigError(f"--jobs = {jobs}: expected a number of processes")
     shipped = shipped_scenarios()
     path = Path(scenario)
     if not path.is_file() and scenario in shipped:

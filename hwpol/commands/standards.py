@@ -61,7 +61,8 @@ def run(options: argparse.Namespace) -> int:
 
 
 def _list(options: argparse.Namespace) -> int:
-    from hwpol.correction.listing import list_standards
+    from hwpol.correction.catalogue import Catalogue
+    from hwpol.correction.catalogue.listing import listing
 
     site: Any = None
     extra: list[Path] = []
@@ -74,10 +75,31 @@ def _list(options: argparse.Namespace) -> int:
         raise ConfigError(
             "--up needs a night file whose instrument has a [site]: hwpol standards night.toml --list --up DATE"
         )
-    rows = list_standards(band=options.band, up=options.up, site=site, extra=extra)
+    found = listing(Catalogue.read(extra), band=options.band, date=options.up, site=site)
+    rows = [_readable(row) for row in found]
     if not rows:
         print("no standard star fits")
         return ASIDE
     head = list(rows[0])
     print(table(head, [[str(row[name]) for name in head] for row in rows]))
     return DONE
+
+
+def _readable(row: dict[str, Any]) -> dict[str, str]:
+    """A listed standard as text: percent, degrees, sexagesimal-free positions."""
+    import numpy as np
+
+    def number(name: str, form: str, scale: float = 1.0) -> str:
+        value = row.get(name, float("nan"))
+        return format(scale * value, form) if np.isfinite(value) else "-"
+
+    shown = {
+        "name": str(row["name"]), "role": str(row["role"]), "ra": number("ra", ".4f"), "dec": number("dec", "+.4f"),
+        "V": number("vmag", ".1f"), "band": str(row["band"]), "p (%)": number("p", ".3f", 100),
+        "+-": number("p_err", ".3f", 100), "theta": number("theta", ".1f"), "+- ": number("theta_err", ".1f"),
+        "from": str(row["provenance"]),
+    }  # fmt: skip
+    if "altitude" in row:
+        shown["highest"] = f"{row['altitude']:.0f} deg"
+    shown["remarks"] = f"varies: {row['variable']}" if row.get("variable") else ""
+    return shown

@@ -4,13 +4,16 @@ from hwpol.demodulation.demodulate import Solution, demodulate, fit_counts
 from hwpol.demodulation.limits import photon_covariance
 from hwpol.demodulation.modulation import modulation_rows
 from hwpol.demodulation.nulls import half_turn_null, time_null
+from hwpol.demodulation.plate import Suspect, plate_suspects
 
 __all__ = [
     "Solution",
+    "Suspect",
     "demodulate",
     "fit_counts",
     "half_turn_null",
     "modulation_rows",
     "photon_covariance",
+    "plate_suspects",
     "time_null",
 ]

@@ -74,33 +74,32 @@ def photometer(
         frames=visits[0],
         calibrator=calibrator,
         targets=tuple(TargetConfig(name=name, xy=xy, moving=moving) for xy in pixels),
-        photometry=PhotometryConfig(extent(radius), (extent(annulus[0]), extent(annulus[1])), "target"),
+        photometry=PhotometryConfig(extent(radius), (extent(annulus[0], "annulus"), extent(annulus[1], "annulus")), "target"),
         registration=registration,
         hits=cosmic_rays,
     )
     return reduce_visit(task).fluxes
 
 
-def extent(value: Any) -> Extent:
-    """A radius from a number of pixels, a Quantity in pixels, "best", or text such as "2.0 fwhm"."""
+def extent(value: Any, name: str = "radius") -> Extent:
+    """An extent from pixels (number or Quantity), text such as "2.0 fwhm", or, for the radius, "best"."""
     if hasattr(value, "to_value"):
         value = float(value.to_value("pix"))
     if isinstance(value, Extent):
         return value
-    if isinstance(value, str):
-        text = value.strip().lower()
-        if text == "best":
-            return Extent(0.0, "best")
-        number, unit = (text[:-4], "fwhm") if text.endswith("fwhm") else (text, "pixel")
-        try:
-            value = float(number)
-        except ValueError:
-            value = float("nan")
-    else:
-        unit = "pixel"
-    if not (np.isfinite(value) and value > 0):
-        raise InputError(f'radius = {value!r}: expected pixels > 0, "best", or a multiple of fwhm such as "2.0 fwhm"')
-    return Extent(float(value), unit)
+    text = str(value).strip().lower()
+    best = name == "radius"
+    if best and text == "best":
+        return Extent(0.0, "best")
+    number, unit = (text[:-4], "fwhm") if text.endswith("fwhm") else (text, "pixel")
+    try:
+        size = float(number)
+    except ValueError:
+        size = float("nan")
+    if not (np.isfinite(size) and size > 0):
+        allowed = 'pixels > 0, "best", or' if best else "pixels > 0, or"
+        raise InputError(f'{name} = {value!r}: expected {allowed} a multiple of fwhm such as "2.0 fwhm"')
+    return Extent(size, unit)
 
 
 def _pixels(positions: Any, frames: FrameSet) -> list[tuple[float, float]]:

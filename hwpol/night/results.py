@@ -16,6 +16,7 @@ from hwpol.flags import Flag, flag_names
 from hwpol.fluxes import Fluxes
 from hwpol.frames import FrameSet
 from hwpol.night.config_objects import NightConfig
+from hwpol.night.foreground import find_foreground, remove_foreground
 from hwpol.night.roles import Role
 from hwpol.night.rows import cycle_rows, result_rows
 from hwpol.night.solve import VisitSolution, solve_visit
@@ -71,6 +72,15 @@ def assemble(
     for visit in visits:
         known = calibration is not None and visit.filter in calibration.filters
         solution = _solve(config, visit, calibration if known else None)
+        foreground, why = find_foreground(
+            config.correction.foreground, solution, len(visit.names), calibration if known else None
+        )
+        if foreground is not None:
+            listed = roles[visit.task_number]
+            science = np.asarray([s < len(listed) and listed[s].role == "science" for s in range(solution.flags.size)])
+            solution = remove_foreground(solution, foreground, science)
+        elif why:
+            words.append(f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {why}")
         solutions.append(solution)
         if calibration is not None and not known:
             words.append(

@@ -181,15 +181,15 @@ class Night:
         config = self.config
         calibrator = self.calibrator(frames)
         tasks, roles = [], {}
-        wanted = {normal_name(name) for name in only}
+        wanted = {normal_name(name): name for name in only}
         seen: set[str] = set()
         for visit in visits:
             number = int(visit.table["visit"][0])
             targets = targets_of(visit, config.targets)
             listed = [role_of(target, visit, catalogue, config.instrument) for target in targets]
             names = {normal_name(t.name) for t in targets} | {normal_name(str(visit.table["object"][0]))}
-            seen |= names & wanted
-            if wanted and not names & wanted and all(role.entry is None for role in listed):
+            seen |= names & wanted.keys()
+            if wanted and not names & wanted.keys() and all(role.entry is None for role in listed):
                 continue
             roles[number] = listed
             tasks.append(
@@ -205,9 +205,9 @@ class Night:
                     gain=config.demodulation.gain,
                 )
             )
-        if wanted - seen:
+        for name in wanted.keys() - seen:
             known = ", ".join(sorted({str(v.table["object"][0]) for v in visits}))
-            raise MissingError(f"--only {sorted(wanted - seen)[0]}: no such target in this night; it has {known}")
+            raise MissingError(f"--only {wanted[name]}: no such target in this night; it has {known}")
         if not tasks:
             raise InputError("nothing to reduce")
         return tasks, roles

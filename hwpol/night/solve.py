@@ -8,7 +8,14 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hwpol.demodulation import demodulate, fit_counts, half_turn_null, photon_covariance
+from hwpol.demodulation import (
+    Suspect,
+    demodulate,
+    fit_counts,
+    half_turn_null,
+    photon_covariance,
+    plate_suspects,
+)
 from hwpol.errors import InputError
 from hwpol.flags import Flag
 from hwpol.fluxes import Fluxes
@@ -43,6 +50,8 @@ class VisitSolution:
     gain, gain_err : ndarray, shape (S, B)
     frames_used : ndarray of int, shape (S,)
     flags : ndarray of int, shape (S,)
+    suspects : tuple of Suspect
+        Frames left out because they do not fit their wave-plate angle.
     """
 
     stokes: Stokes
@@ -60,6 +69,7 @@ class VisitSolution:
     gain_err: Array
     frames_used: NDArray[np.int_]
     flags: NDArray[np.int_]
+    suspects: tuple[Suspect, ...] = ()
 
 
 def solve_visit(
@@ -79,6 +89,9 @@ def solve_visit(
         As `hwpol.demodulate`.
     """
     options: dict[str, Any] = {"method": method, "gain": gain, "circular": circular}
+    suspects = plate_suspects(fluxes, gain=gain, calibration=calibration)
+    bad = np.isin(np.arange(fluxes.shape[1]), [suspect.frame for suspect in suspects])
+    fluxes = replace(fluxes, flux=np.where(bad[:, None], np.nan, fluxes.flux))
     cycles = demodulate(fluxes, per="cycle", calibration=calibration, **options)
     combined = combine(cycles.q, cycles.u, cycles.random_covariance)
     solvable = np.isfinite(cycles.q)
@@ -102,6 +115,7 @@ def solve_visit(
     flags |= np.where(complete.all(), 0, int(Flag.INCOMPLETE_CYCLE))
     flags |= np.where(set_aside.any(axis=1), int(Flag.CYCLE_SET_ASIDE), 0)
     flags |= np.where(excess, int(Flag.EXCESS_SCATTER), 0)
+    flags |= int(Flag.PLATE_SUSPECT) if suspects else 0
     flags |= np.where(repeats, 0, int(Flag.NO_REPEATS))
     with np.errstate(invalid="ignore"):
         flags |= np.where(_null_probability(null, null_covariance) < DOUBT, int(Flag.NULL_FAILED), 0)
@@ -123,6 +137,7 @@ def solve_visit(
         gain_err=ratio_err,
         frames_used=np.isfinite(used.flux).any(axis=2).sum(axis=1),
         flags=flags,
+        suspects=tuple(suspects),
     )
 
 
