@@ -215,6 +215,25 @@ def test_field_pattern_by_cross_validation(bench, seed):
     assert (len(names), names[0], names[-1]) == (300, "field 1", "field 300")
 
 
+def test_one_zero_star_moved_over_the_field(bench):
+    b = bench(efficiency=1.0, zero_angle=0.0, rng=np.random.default_rng(6))
+    grid = np.linspace(50, 1997, 6)
+    places = [(x, y) for x in grid for y in grid]
+    stars = [b.zero("z", true=4e-4, cat_err=3e-4, ip=complex(field(x, y)), x=x, y=y) for x, y in places]
+    model = Calibration.fit(stars, field_order="best", field_range=[[0, 2047], [0, 2047]]).filters["V"]
+    assert [n for n in model.names if n.startswith("ip_u_")] == ["ip_u_x", "ip_u_y", "ip_u_xx", "ip_u_xy", "ip_u_yy"]
+    # The pattern does not depend on the star's own polarisation; the constant part does, and its error says so.
+    assert abs(model.value("ip_u_xy") - 0.014) < 5 * model.error("ip_u_xy")
+    assert model.error("ip_u_xy") < 5e-5
+    assert model.error("ip_q") > 2.9e-4
+
+
+def test_best_order_without_positions_is_none(bench):
+    b = bench(rng=np.random.default_rng(7))
+    model = Calibration.fit([b.zero(f"z{k}") for k in range(12)], field_order="best").filters["V"]
+    assert model.names == ("ip_q", "ip_u", "a_re", "a_im")
+
+
 def test_cross_validation_does_not_overfit(bench):
     from hwpol.correction.fitting.least_squares import Data
     from hwpol.correction.fitting.selection import cross_validate
