@@ -128,6 +128,8 @@ def test_zero_polarised_entries(catalogue):
     tabulated = catalogue.find("HD 21447", band="B")
     assert (tabulated.p, tabulated.p_err, tabulated.role) == (0.00017, 0.0003, "zero-polarised")
     assert np.isnan(tabulated.theta)
+    other = catalogue.find("HD 21447", band="I")  # B was read, V recalled
+    assert (other.p, other.method, other.provenance) == (0.00017, "nearest", "read")
     unlisted = catalogue.find("HD 10476", band="R")  # listed as unpolarised without a value
     assert np.hypot(unlisted.p, unlisted.p_err) / np.sqrt(2) == pytest.approx(0.0005, rel=1e-12)
     any_band = catalogue.find("HD 4813", band="I")  # a value for every band, without error
@@ -182,6 +184,11 @@ def test_angle_interpolates_across_180(tmp_path):
 def test_johnson_r_is_not_cousins_r(catalogue):
     entry = catalogue.find("BD+59 389", band="Johnson R")
     assert (entry.method, entry.wavelength) == ("fitted", 0.70)
+
+
+def test_a_wavelength_far_from_its_band_is_believed(catalogue):
+    assert catalogue.find("BD+59 389", band="R", wavelength=0.66).method == "tabulated"
+    assert catalogue.find("BD+59 389", band="R", wavelength=0.70).method == "fitted"
 
 
 def test_users_tables_go_first(tmp_path):

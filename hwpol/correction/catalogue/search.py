@@ -35,8 +35,9 @@ SEARCH_RADIUS, SEARCH_YEARS = 30.0, 40.0
 ANGLE_DRIFT = 3.0
 #: Tabulated bands from which on the law is fitted through them rather than taken from the table of parameters.
 FIT_BANDS = 3
-#: Micron within which a wavelength stands for a tabulated band.
-SAME_WAVELENGTH = 0.01
+#: Micron within which a wavelength stands for a tabulated band, and within which it may depart from that of the band
+#: named beside it; further off, the wavelength is believed (a Johnson R called R, say).
+SAME_WAVELENGTH, BAND_LEEWAY = 0.01, 0.03
 
 
 @dataclass(frozen=True)
@@ -45,7 +46,8 @@ class Entry:
 
     `p`, `p_err` fractions; `theta`, `theta_err` deg (NaN for zero-polarised stars); errors as used, floors included;
     `wavelength` micron; `ra`, `dec` deg (NaN where not known). `method` is "tabulated", "serkowski" (parameters from
-    the table) or "fitted" (the law through the star's tabulated bands). `variable` says who calls the star variable or
+    the table), "fitted" (the law through the star's tabulated bands) or "nearest" (a zero-polarisation star's value of
+    another band, one read before one recalled). `variable` says who calls the star variable or
     doubtful, empty for nobody. `provenance` is "memory" where any value behind it was recalled.
     """
 
@@ -263,6 +265,8 @@ class Catalogue:
                 if wavelength is None:
                     raise
                 return None, wavelength
+            if wavelength is not None and abs(wavelength - lam) > BAND_LEEWAY:
+                return None, wavelength
             return name, lam if wavelength is None else wavelength
         return None, wavelength
 
@@ -287,16 +291,24 @@ class Catalogue:
         return near[0] if near else None
 
     def _zero(self, star: Star, band: str | None, lam: float | None) -> _Value | None:
-        row = self._pick(star.rows, band, lam)
+        row = self._pick(star.rows, band, lam) or next((r for r in star.rows if not r["band"]), None)
+        method = "tabulated"
         if row is None:
-            known = [row for row in star.rows if np.isfinite(row["p"])] or star.rows
             target = 0.55 if lam is None else lam
-            row = min(known, key=lambda r: abs(np.nan_to_num(self._row_wavelength(r), nan=target) - target))
+            row = min(
+                star.rows,
+                key=lambda r: (
+                    not np.isfinite(r["p"]),
+                    r.get("provenance") == "memory",
+                    abs(np.nan_to_num(self._row_wavelength(r), nan=target) - target),
+                ),
+            )
+            method = "nearest"
         p = row["p"] if np.isfinite(row["p"]) else 0.0
         err = row["p_err"]
         if not np.isfinite(err):
             err = max(p, ZERO_LEAST) if np.isfinite(row["p"]) else ZERO_FLOOR * np.sqrt(2)
-        return _Value(p, float(err), float("nan"), float("nan"), "tabulated", [row])
+        return _Value(p, float(err), float("nan"), float("nan"), method, [row])
 
     def _value(self, star: Star, band: str | None, lam: float | None) -> _Value | None:
         rows = [row for row in star.rows if np.isfinite(row["p"])]
