@@ -1,7 +1,6 @@
 """Nights that several folders of tests use."""
 
 import copy
-import os
 import shutil
 
 import pytest
@@ -10,7 +9,7 @@ ANGLES = [0.0, 22.5, 45.0, 67.5]
 
 TINY = {
     "name": "tiny",
-    "seed": 5,
+    "seed": 7,
     "start": "2026-03-14T00:20:00",
     "overhead": 6.0,
     "slew": 30.0,
@@ -29,6 +28,7 @@ TINY = {
         "site": {"longitude": -70.2, "latitude": -29.8, "height": 2450.0},
     },
     "array": {"shape": [96, 100]},
+    "night": {"products": {"report": False}},
     "beam": [{}, {"throughput": 0.9}],
     "filters": {"V": {"ip": [0.004, -0.002], "efficiency": 0.98, "zero_angle": 5.0, "sky": 2.0}},
     "atmosphere": {"seeing": 3.0, "seeing_change": 0.03, "clouds": 0.05},
@@ -100,16 +100,3 @@ def edit():
         path.write_text(text.replace(old, new), encoding="utf-8")
 
     return replace
-
-
-@pytest.fixture
-def locked(tmp_path):
-    """A folder that cannot be written to; skips where nothing stops this user."""
-    folder = tmp_path / "locked"
-    folder.mkdir()
-    folder.chmod(0o500)
-    if os.access(folder, os.W_OK):
-        folder.chmod(0o700)
-        pytest.skip("this user may write everywhere")
-    yield folder
-    folder.chmod(0o700)

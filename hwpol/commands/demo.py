@@ -7,7 +7,7 @@ from pathlib import Path
 
 from hwpol.commands import DONE, FAILED
 from hwpol.commands.reduce import draw_page
-from hwpol.commands.running import add_execution, executor_for
+from hwpol.commands.running import add_execution, check_jobs, executor_for
 from hwpol.commands.screen import Steps, calibration_lines, degrees, percent, table, with_error
 
 #: Distance from the truth, in stated errors, that a demo value must stay within.
@@ -27,9 +27,10 @@ def run(options: argparse.Namespace) -> int:
     from hwpol.commands.simulate import make_night
     from hwpol.night import Night
 
+    jobs = check_jobs(options.jobs) or 2
     if not options.quiet:
         print("Simulating a night of an invented observatory ...", flush=True)
-    simulated = make_night("demo", options.folder, jobs=options.jobs or 2, quiet=options.quiet)
+    simulated = make_night("demo", options.folder, jobs=jobs, quiet=options.quiet)
     if not options.quiet:
         print(f"Reducing {len(simulated.paths)} frames ...", flush=True)
     night = Night.read(simulated.night_path)

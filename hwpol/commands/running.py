@@ -24,6 +24,13 @@ def add_execution(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--dask", metavar="ADDRESS", help="run on the Dask cluster at this address instead")
 
 
+def check_jobs(jobs: int) -> int:
+    """Return a number of processes; ConfigError where it is none."""
+    if jobs < 0:
+        raise ConfigError(f"--jobs = {jobs}: expected a number of processes, or 0 for all cores")
+    return jobs
+
+
 @contextlib.contextmanager
 def executor_for(options: argparse.Namespace) -> Iterator[Executor | None]:
     """Yield the executor that the options ask for; None for this process alone."""
@@ -31,9 +38,7 @@ def executor_for(options: argparse.Namespace) -> Iterator[Executor | None]:
         with _dask(options.dask) as executor:
             yield executor
         return
-    if options.jobs < 0:
-        raise ConfigError(f"--jobs = {options.jobs}: expected a number of processes, or 0 for all cores")
-    jobs = options.jobs or min(
+    jobs = check_jobs(options.jobs) or min(
         len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1, 8
     )
     if jobs == 1:

@@ -7,8 +7,9 @@ from pathlib import Path
 from typing import Any
 
 from hwpol.commands import DONE
+from hwpol.commands.running import check_jobs
 from hwpol.commands.screen import Steps
-from hwpol.errors import ConfigError, InputError
+from hwpol.errors import InputError
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -20,7 +21,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace) -> int:
     """Simulate and say where things are."""
-    night = make_night(options.scenario, options.folder, jobs=options.jobs, quiet=options.quiet)
+    night = make_night(options.scenario, options.folder, jobs=check_jobs(options.jobs), quiet=options.quiet)
     print(f"{len(night.paths)} frames in {Path(options.folder) / 'raw'}; the truth in {night.truth_path}")
     print(f"Reduce them with: hwpol reduce {night.night_path}")
     return DONE
@@ -30,8 +31,6 @@ def make_night(scenario: str, folder: str, *, jobs: int, quiet: bool) -> Any:
     """Simulate a scenario, by path or shipped name, into a folder that must be new or empty."""
     from hwpol.simulate import Scenario, shipped_scenarios, simulate
 
-    if jobs < 0:
-        raise ConfigError(f"--jobs = {jobs}: expected a number of processes")
     shipped = shipped_scenarios()
     path = Path(scenario)
     if not path.is_file() and scenario in shipped:
@@ -41,8 +40,13 @@ def make_night(scenario: str, folder: str, *, jobs: int, quiet: bool) -> Any:
     target = Path(folder)
     if target.exists() and (not target.is_dir() or any(target.iterdir())):
         raise InputError(f"{target}: exists and is not empty; give a new folder")
+    chosen = Scenario.read(path)
+    try:
+        target.mkdir(parents=True, exist_ok=True)
+    except OSError as problem:
+        raise InputError(f"{target}: cannot be made ({problem.strerror}); give a folder that can") from None
     steps = Steps(quiet, unit="frame")
-    return simulate(Scenario.read(path), target, jobs=jobs, progress=_sparse(steps))
+    return simulate(chosen, target, jobs=jobs, progress=_sparse(steps))
 
 
 def _sparse(steps: Steps) -> Any:

@@ -74,7 +74,9 @@ def photometer(
         frames=visits[0],
         calibrator=calibrator,
         targets=tuple(TargetConfig(name=name, xy=xy, moving=moving) for xy in pixels),
-        photometry=PhotometryConfig(extent(radius), (extent(annulus[0], "annulus"), extent(annulus[1], "annulus")), "target"),
+        photometry=PhotometryConfig(
+            extent(radius), (extent(annulus[0], "annulus"), extent(annulus[1], "annulus")), "target"
+        ),
         registration=registration,
         hits=cosmic_rays,
     )
