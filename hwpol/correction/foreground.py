@@ -226,5 +226,3 @@ def _mean(values: Array, covariance: Array) -> tuple[float, Array, Array, Array]
         variance = float(brentq(lambda v: at(v)[0], 0.0, top))
     _, mean, error, weights = at(variance)
     return float(np.sqrt(variance)), mean, error, weights
-
-

@@ -17,7 +17,7 @@ from hwpol.stokes import ROTATION_LIMIT
 Array = NDArray[np.float64]
 
 #: False alarms allowed per cycle.
-FALSE_ALARMS = 1e-3
+FALSE_ALARMS = 5e-4
 #: Cycles without which a bad frame cannot be told from its twins.
 LEAST_CYCLES = 3
 #: Brightest sources that take part: more add little and cost time.
@@ -73,26 +73,35 @@ def plate_suspects(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = No
         tested = kept & (dof > 0)
         if not tested.any():
             break
-        ratio = misfit[tested] / dof[tested]
-        typical = np.median(ratio) / np.median((1 - 2 / (9 * dof[tested])) ** 3)
-        chance = np.where(tested, _chance(misfit, np.maximum(dof, 1), float(typical), int(tested.sum())), 1.0)
-        worst = int(np.argmin(chance))
-        if chance[worst] >= FALSE_ALARMS / per_cycle:
+        worst = int(np.argmin(np.where(tested, chdtrc(np.maximum(dof, 1), misfit), 1.0)))
+        if chdtrc(dof[worst], misfit[worst]) >= FALSE_ALARMS / per_cycle:
             break
-        kept[worst] = False
-        position = _likely(chosen, kept, worst, gain, calibration)
-        suspects.append(Suspect(worst, float(chance[worst]), position))
+        # What is typical must be told without the frame in question, which spoils the prediction of all others.
+        without = kept.copy()
+        without[worst] = False
+        rest, rest_dof = _misfits(chosen, without, gain, calibration)
+        chance = _chance(misfit[worst], int(dof[worst]), rest, rest_dof)
+        if chance >= FALSE_ALARMS / per_cycle:
+            break
+        kept = without
+        suspects.append(Suspect(worst, chance, _likely(chosen, kept, worst, gain, calibration)))
     return suspects if kept.sum() > (1 - MOST_SUSPECTS) * len(kept) else []
 
 
-def _chance(misfit: Array, dof: NDArray[np.int_], typical: float, frames: int) -> Array:
-    """Probability of misfits by noise; where the frames scatter beyond their errors, that scatter is itself uncertain.
+def _chance(misfit: float, dof: int, rest: Array, rest_dof: NDArray[np.int_]) -> float:
+    """Probability of a misfit by noise; where the other frames scatter beyond their errors, by that scatter.
 
     A median of n squares is worth about 0.6 n of them (its efficiency is 2/pi).
     """
+    used = rest_dof > 0
+    if not used.any():
+        return float(chdtrc(dof, misfit))
+    usual = float(np.median(rest_dof[used]))
+    typical = float(np.median(rest[used] / rest_dof[used])) / (1 - 2 / (9 * usual)) ** 3
+    worth = max(0.6 * (used.sum() - 3), 1.0) * usual
     if typical <= 1:
-        return np.asarray(chdtrc(dof, misfit))
-    return np.asarray(fdtrc(dof, np.maximum(0.6 * (frames - 3), 2.0) * dof, misfit / dof / typical))
+        return float(chdtrc(dof, misfit))
+    return float(fdtrc(dof, worth, misfit / dof / typical))
 
 
 def _brightest(fluxes: Fluxes) -> Fluxes:

@@ -53,7 +53,7 @@ def find_foreground(
 def remove_foreground(solution: VisitSolution, foreground: Foreground, chosen: NDArray[np.bool_]) -> VisitSolution:
     """Take the foreground off the sources `chosen` (S,), and off their cycles, whose common error it is there."""
     stokes = solution.stokes
-    taken = foreground.subtract(stokes)
+    taken = foreground.subtract(stokes, calibration)
     cycles = solution.cycles
     pick = chosen[:, None]
     shared = np.zeros((*cycles.shape, 2, 2)) if cycles.calibration_covariance is None else cycles.calibration_covariance

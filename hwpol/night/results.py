@@ -78,7 +78,7 @@ def assemble(
         if foreground is not None:
             listed = roles[visit.task_number]
             science = np.asarray([s < len(listed) and listed[s].role == "science" for s in range(solution.flags.size)])
-            solution = remove_foreground(solution, foreground, science)
+            solution = remove_foreground(solution, foreground, science, calibration)
         elif why:
             words.append(f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {why}")
         solutions.append(solution)
@@ -87,6 +87,10 @@ def assemble(
                 f"filter {visit.filter!r}: the calibration does not have it; q and u of visit {visit.task_number} stay "
                 "in the instrument frame"
             )
+        words += [
+            f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {frame} {reason}"
+            for (_, frame), reason in _suspect_frames([visit], [solution]).items()
+        ]
         own, each = _rows(config, visit, solution, roles[visit.task_number], calibration if known else None)
         rows += own
         cycles += each
@@ -104,7 +108,7 @@ def assemble(
         results=make_table(rows, "results", meta),
         cycles=make_table(cycles, "cycles", meta),
         frames=make_table(
-            _frame_rows(config, frames, visits, failed), "frames", {"instrument": config.instrument.name}
+            _frame_rows(config, frames, visits, solutions, failed), "frames", {"instrument": config.instrument.name}
         ),
         standards=make_table(standards, "standards", meta),
         calibration=calibration,
@@ -243,9 +247,13 @@ def _standard_row(name: str, visit: VisitResult, stokes: Stokes, role: Role) -> 
 
 
 def _frame_rows(
-    config: NightConfig, frames: FrameSet, visits: Sequence[VisitResult], failed: dict[int, str]
+    config: NightConfig,
+    frames: FrameSet,
+    visits: Sequence[VisitResult],
+    solutions: Sequence[VisitSolution],
+    failed: dict[int, str],
 ) -> list[dict[str, Any]]:
-    lost = _lost_frames(visits)
+    lost = _lost_frames(visits) | _suspect_frames(visits, solutions)
     rows = []
     for row in frames.table:
         status, reason = str(row["status"]), str(row["reason"])
@@ -272,6 +280,19 @@ def _lost_frames(visits: Sequence[VisitResult]) -> dict[tuple[int, str], str]:
             why = ", ".join(name.replace("_", " ") for name in flag_names(bits)) or "not measured"
             lost[visit.task_number, fluxes.frames[k]] = f"no source of its visit could be measured in it: {why}"
     return lost
+
+
+def _suspect_frames(visits: Sequence[VisitResult], solutions: Sequence[VisitSolution]) -> dict[tuple[int, str], str]:
+    """Frames that contradict their wave-plate angle, with the reason."""
+    found = {}
+    for visit, solution in zip(visits, solutions, strict=True):
+        for suspect in solution.suspects:
+            psi = visit.fluxes.wave_plate[suspect.frame]
+            instead = f"it fits {suspect.position:g} deg" if np.isfinite(suspect.position) else "it fits no position"
+            found[visit.task_number, visit.fluxes.frames[suspect.frame]] = (
+                f"does not fit its wave-plate angle {psi:g} deg (chance {suspect.chance:.1g}): {instead}"
+            )
+    return found
 
 
 def _relative(file: str, folder: Path) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -60,6 +60,8 @@ def role_of(target: TargetConfig, visit: FrameSet, catalogue: Catalogue, instrum
             None,
             f"{target.name}: no catalogue value for filter {filter_name!r} (band {band})",
         )
+    if target.role == "zero-polarised" and entry.role == "polarised":
+        return Role(target.role, replace(entry, role=target.role, theta=float("nan"), theta_err=float("nan")))
     if target.role is not None and target.role != entry.role:
         return Role(
             target.role, None, f"{target.name}: role {target.role!r}, but the catalogue lists it as {entry.role}"

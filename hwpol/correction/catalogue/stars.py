@@ -45,7 +45,10 @@ def enter(
     """Add a row to its star; the problems it makes."""
     names = [row["name"], *(n.strip() for n in row.get("aliases", "").split(";") if n.strip())]
     keys = [star_key(n) for n in names]
-    role = "zero-polarised" if table.kind == "zero-polarised" else "polarised"
+    # A star without an angle can serve as zero-polarised only, whatever table it stands in.
+    angle = row.get("theta", float("nan"))
+    zero = table.kind == "zero-polarised" or (table.kind == "polarised" and not np.isfinite(angle))
+    role = "zero-polarised" if zero else "polarised"
     known = list({id(index[k]): index[k] for k in keys if k in index}.values())
     place = f"{table.path.name}, row {number} ({row['name']})"
     if len(known) > 1:
@@ -80,5 +83,3 @@ def close_pairs(stars: list[Star]) -> list[str]:
                             f"zero-polarised) are {gap:.1f} arcsec apart; remove one of them"
                         )
     return problems
-
-

@@ -75,12 +75,12 @@ def _kind(path: Path, columns: list[str], meta: dict[str, Any]) -> str:
         return "curves"
     if "wavelength" in columns and "p" not in columns:
         return "bands"
-    role = str(meta.get("role", "")).strip().lower()
+    role = str(meta.get("role", "")).strip().lower().replace("_", "-").replace(" ", "-")
     if role in ROLES:
         return role
     if role:
         raise ConfigError(f"role = {role!r} in the table's metadata: expected one of {', '.join(ROLES)}", str(path))
-    return "zero-polarised" if re.match(r"(zero|unpol|null)", path.stem.lower()) else "polarised"
+    return "zero-polarised" if re.search(r"zero|unpol|non.?pol|null", path.stem.lower()) else "polarised"
 
 
 def _column(table: Any, name: str) -> list[Any]:
@@ -124,7 +124,7 @@ def read_table(path: str | Path) -> StarTable:
     """Read and check one table.
 
     The kind follows from the columns; star tables are zero-polarised where the metadata say ``role: zero-polarised`` or
-    the file name begins with "zero", "unpol" or "null".
+    the file name holds "zero", "unpol" or "null".
 
     Raises
     ------

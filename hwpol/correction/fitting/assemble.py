@@ -183,9 +183,7 @@ def _reason(fit: Fit, star: int) -> str:
     return f"differs from what the other standards predict by {fit.departure[star]:.1f} sigma"
 
 
-def _table(
-    name: str, model: FilterModel, selected: Selected, data: Data, items: list[Item]
-) -> list[dict[str, Any]]:
+def _table(name: str, model: FilterModel, selected: Selected, data: Data, items: list[Item]) -> list[dict[str, Any]]:
     fit = selected.fit
     calibration = Calibration({name: model})
     number = np.cumsum(selected.stars) - 1

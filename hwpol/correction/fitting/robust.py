@@ -176,9 +176,7 @@ def _droppable(kept: NDArray[np.bool_], classes: list[NDArray[np.int_]]) -> NDAr
     return out
 
 
-def _softened(
-    sums: Sums, frame: Frame, kept: NDArray[np.bool_], classes: list[NDArray[np.int_]]
-) -> Array:
+def _softened(sums: Sums, frame: Frame, kept: NDArray[np.bool_], classes: list[NDArray[np.int_]]) -> Array:
     """Weights of the stars kept: a star that departs, though not enough to be left out, gets its errors enlarged.
 
     The factor is the one that makes its departure from the others what its errors let expect. The worst come
