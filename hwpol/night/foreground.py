@@ -50,7 +50,9 @@ def find_foreground(
         return None, f"no foreground was removed: {problem}"
 
 
-def remove_foreground(solution: VisitSolution, foreground: Foreground, chosen: NDArray[np.bool_]) -> VisitSolution:
+def remove_foreground(
+    solution: VisitSolution, foreground: Foreground, chosen: NDArray[np.bool_], calibration: Any
+) -> VisitSolution:
     """Take the foreground off the sources `chosen` (S,), and off their cycles, whose common error it is there."""
     stokes = solution.stokes
     taken = foreground.subtract(stokes, calibration)

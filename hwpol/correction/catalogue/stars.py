@@ -12,6 +12,8 @@ from hwpol.correction.catalogue.tables import StarTable, star_key
 
 #: Separation (arcsec) below which two names are taken for one star.
 SAME_PLACE = 5.0
+#: p (fraction) below which a star without an angle is taken for zero-polarised.
+WEAK = 0.005
 
 
 @dataclass
@@ -45,9 +47,11 @@ def enter(
     """Add a row to its star; the problems it makes."""
     names = [row["name"], *(n.strip() for n in row.get("aliases", "").split(";") if n.strip())]
     keys = [star_key(n) for n in names]
-    # A star without an angle can serve as zero-polarised only, whatever table it stands in.
-    angle = row.get("theta", float("nan"))
-    zero = table.kind == "zero-polarised" or (table.kind == "polarised" and not np.isfinite(angle))
+    own = [other for other in table.rows if other["name"] == row["name"]]
+    blank = table.kind == "polarised" and not any(np.isfinite(other.get("theta", float("nan"))) for other in own)
+    # A user's table may hold both kinds: a star of next to no p and no angle serves as zero-polarised.
+    weak = all(other.get("p", float("nan")) < WEAK for other in own)
+    zero = table.kind == "zero-polarised" or (users and blank and weak)
     role = "zero-polarised" if zero else "polarised"
     known = list({id(index[k]): index[k] for k in keys if k in index}.values())
     place = f"{table.path.name}, row {number} ({row['name']})"
