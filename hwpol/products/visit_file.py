@@ -165,9 +165,11 @@ def read_visit(path: str | Path) -> VisitFile:
     """
     source = Path(path)
     try:
-        with warnings.catch_warnings(), fits.open(source, memmap=False) as hdus:
+        with warnings.catch_warnings(), source.open("rb") as stream:
+            # What is wrong with the file is told by what it lacks.
             warnings.simplefilter("ignore")
-            return _from_hdus(hdus)
+            with fits.open(stream, memmap=False) as hdus:
+                return _from_hdus(hdus)
     except (OSError, KeyError, ValueError, TypeError, IndexError) as problem:
         first = str(problem).splitlines()[0] if str(problem) else type(problem).__name__
         raise InputError(f"{source}: cannot be read as the file of a visit ({first}); reduce the night again") from None

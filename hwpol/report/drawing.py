@@ -19,6 +19,9 @@ from hwpol.report.style import COLOURS, MARKERS, VERMILION, inline_svg, new_figu
 
 Array = NDArray[np.float64]
 
+#: Errors from the fit beyond which a frame is named: one in a million clean frames.
+OFF = 5.0
+
 
 @dataclass(frozen=True)
 class Plot:
@@ -59,9 +62,17 @@ def visit_plots(stored: Stored, visit: VisitFile) -> list[Plot]:
         plots.append(_radius(visit, who))
     if np.isfinite(visit.modulation["value"]).any():
         plots.append(_modulation(visit, who))
-    plots.append(_cycles(stored, visit, who))
+    if np.isfinite(stored.results.table["q"][stored.target_row(visit.number)]):
+        plots.append(_cycles(stored, visit, who))
     plots.append(_series(visit, who))
-    return [plot for plot in plots if plot is not None]
+    return plots
+
+
+def off_the_fit(visit: VisitFile) -> list[str]:
+    """Frames that lie further than `OFF` of their errors from the fit."""
+    with np.errstate(invalid="ignore", divide="ignore"):
+        distance = np.abs(visit.modulation["value"] - visit.modulation["model"]) / visit.modulation["error"]
+        return [visit.files[k] for k in np.flatnonzero((distance > OFF).any(axis=1))]
 
 
 def _stamps(visit: VisitFile, who: str) -> Plot:
@@ -85,10 +96,10 @@ def _stamps(visit: VisitFile, who: str) -> Plot:
     return Plot(inline_svg(figure, f"v{visit.number}-stamps", alt), caption)
 
 
-def _pair(height: float = 3.3, ratios: tuple[float, ...] = (3, 2)) -> tuple[Figure, Any]:
+def _pair(height: float = 3.3, ratios: tuple[float, ...] = (3, 2), head: float = 0.07) -> tuple[Figure, Any]:
     figure = new_figure(3.9, height)
     axes = figure.subplots(len(ratios), 1, sharex=True, height_ratios=ratios)
-    figure.subplots_adjust(left=0.17, right=0.98, bottom=0.135, top=0.98, hspace=0.08)
+    figure.subplots_adjust(left=0.17, right=0.98, bottom=0.45 / height, top=1 - head / height, hspace=0.08)
     return figure, axes
 
 
@@ -102,10 +113,12 @@ def _radius(visit: VisitFile, who: str) -> Plot:
     top.plot(visit.radii, 100 * visit.growth, color=COLOURS[2], marker="^", markersize=3.4, linewidth=0.8)
     figures.series.mark_radius(top, visit.radius)
     top.set_ylabel("light inside (%)")
+    curve = np.isfinite(visit.curve_q).any()
     figures.radius_curve(
         bottom, visit.radii, visit.curve_q, visit.curve_u, visit.curve_q_err, visit.curve_u_err, visit.radius
     )
-    bottom.legend(ncols=2, loc="best")
+    if curve:
+        bottom.legend(ncols=2, loc="best")
     _aligned((top, bottom))
     caption = (
         "Light inside the aperture, and q and u against its radius (instrument frame; points of one curve share "
@@ -184,13 +197,14 @@ def _series(visit: VisitFile, who: str) -> Plot:
     known = np.isfinite(mjd).any()
     minutes = (mjd - np.nanmin(mjd)) * 1440 if known else np.arange(len(mjd), dtype=float)
     scale = visit.pixel_scale if np.isfinite(visit.pixel_scale) else 1.0
-    figure, axes = _pair(3.6, (1, 1, 1))
+    figure, axes = _pair(3.75, (1, 1, 1), 0.26)
     figures.time_series(axes[0], minutes, visit.frames["sky"], names=visit.beams, label="sky (e⁻/pixel)")
     figures.time_series(
         axes[1], minutes, scale * visit.frames["fwhm"], label=f"seeing ({'″' if scale != 1.0 else 'pixels'})"
     )
     figures.time_series(axes[2], minutes, 100 * visit.frames["transparency"], label="transparency (%)")
-    axes[0].legend(ncols=2, loc="best")
+    if len(visit.beams) > 1:
+        axes[0].legend(ncols=4, loc="lower left", bbox_to_anchor=(0.0, 1.0), borderaxespad=0.1)
     for one in axes:
         one.locator_params(axis="y", nbins=4)
     axes[2].set_xlabel(f"minutes from {utc(float(np.nanmin(mjd)))} UTC" if known else "frame")

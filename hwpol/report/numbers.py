@@ -25,7 +25,7 @@ def percent(value: float, error: float = math.nan, *, sign: bool = False) -> str
     if not math.isfinite(value):
         return UNKNOWN
     places = places_for(100 * error, 5) if math.isfinite(error) and error > 0 else 3
-    return f"{100 * value:{'+' if sign else ''}.{places}f}"
+    return _signed(f"{100 * value:{'+' if sign else ''}.{places}f}", sign)
 
 
 def degrees(value: float, error: float = math.nan) -> str:
@@ -33,12 +33,25 @@ def degrees(value: float, error: float = math.nan) -> str:
     if not math.isfinite(value):
         return UNKNOWN
     places = places_for(error, 3) if math.isfinite(error) and error > 0 else 1
-    return f"{value:.{places}f}"
+    return _signed(f"{value:.{places}f}")
 
 
 def plain(value: float, places: int = 2) -> str:
     """A number with given decimals."""
-    return f"{value:.{places}f}" if math.isfinite(value) else UNKNOWN
+    return _signed(f"{value:.{places}f}") if math.isfinite(value) else UNKNOWN
+
+
+def significant(value: float, digits: int = 3) -> str:
+    """A number without decimals, rounded to so many digits (all of them where it has fewer decimals than that)."""
+    if not math.isfinite(value):
+        return UNKNOWN
+    size = digits - 1 - (math.floor(math.log10(abs(value))) if value else 0)
+    return f"{float(f'{value:.{digits}g}'):.{max(size, 0)}f}"
+
+
+def _signed(text: str, sign: bool = False) -> str:
+    """No minus before what is rounded to zero."""
+    return text if text.strip("+-0.") else ("+" if sign else "") + text.lstrip("+-")
 
 
 @dataclass(frozen=True)
@@ -88,6 +101,11 @@ class Sheet:
         """Any other number."""
         value = self.number(row, column)
         return self._cell(row, column, value, plain(value, places))
+
+    def significant(self, row: Any, column: str) -> Cell:
+        """Any other number, three digits."""
+        value = self.number(row, column)
+        return self._cell(row, column, value, significant(value))
 
     def _cell(self, row: Any, column: str, value: float, text: str) -> Cell:
         return Cell(f"{self.name}/{row}/{column}", value, text)

@@ -11,7 +11,7 @@ from markupsafe import Markup
 
 from hwpol.errors import InputError
 from hwpol.products import write_text
-from hwpol.report.drawing import utc
+from hwpol.report.drawing import off_the_fit, utc
 from hwpol.report.drawing import visit_plots as draw_visit
 from hwpol.report.field import field_plot
 from hwpol.report.rows import (
@@ -154,6 +154,7 @@ def _title(stored: Stored) -> str:
 def _visit(stored: Stored, number: int) -> dict[str, Any]:
     visit = stored.visit(number)
     facts = visit_facts(stored, number)
+    facts["off"] = [] if visit is None else off_the_fit(visit)
     facts["plots"] = [] if visit is None else [html(plot) for plot in draw_visit(stored, visit)]
     return facts
 

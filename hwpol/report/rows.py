@@ -42,6 +42,7 @@ def polarisation_cells(sheet: Sheet, row: int) -> dict[str, Any]:
         "u": sheet.percent(row, "u", total["u"], sign=True),
         "u_err": sheet.percent(row, "u_err", total["u"]),
         "weak": weak,
+        "known": bool(np.isfinite(sheet.number(row, "q"))),
         "instrument": sheet.text(row, "frame") != "sky",
         "flags": flag_words(int(sheet.table["flags"][row])),
     }
@@ -90,7 +91,7 @@ def visit_facts(stored: Stored, number: int) -> dict[str, Any]:
         ("airmass", sheet.plain(row, "airmass", 2), ""),
         ("aperture", sheet.plain(row, "radius", 1), "pixels"),
         ("seeing", sheet.plain(row, "fwhm", 1), "pixels"),
-        ("signal", sheet.plain(row, "flux", 0), "e⁻/s"),
+        ("signal", sheet.significant(row, "flux"), "e⁻/s"),
     ]
     start = f"visit {number} ("
     return {
@@ -123,7 +124,7 @@ def calibration_sections(stored: Stored) -> list[dict[str, Any]]:
                 if entry is None
                 else [f"{item['name']} ({item['reason']})" for item in entry.get("left_out", [])],
                 "flags": [] if entry is None else flag_words(_bits(entry.get("flags", []))),
-                "plots": [html(plot) for plot in calibration_plots(stored, name, number)],
+                "plots": [[html(plot) for plot in column] for column in calibration_plots(stored, name, number)],
             }
         )
     return sections

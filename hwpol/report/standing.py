@@ -18,22 +18,24 @@ from hwpol.report.style import BLUE, COLOURS, FAINT, MARKERS, VERMILION, inline_
 MOST_ROWS = 40
 
 
-def calibration_plots(stored: Stored, name: str, number: int) -> list[Plot]:
-    """Figures of one filter's calibration; `number` makes their names."""
+def calibration_plots(stored: Stored, name: str, number: int) -> list[list[Plot]]:
+    """Figures of one filter's calibration, low ones in one column; `number` makes their names."""
     table = stored.standards.table
     here = np.asarray(table["filter"]) == name
     zero = np.flatnonzero(here & (np.asarray(table["role"]) == "zero-polarised"))
     polarised = np.flatnonzero(here & (np.asarray(table["role"]) == "polarised"))
     rows = np.flatnonzero(here)
-    plots = []
+    columns = []
     if len(zero):
-        plots.append(_observed_zeros(stored, name, zero, number))
+        columns.append([_observed_zeros(stored, name, zero, number)])
         if np.isfinite(np.asarray(table["dq"])[zero]).any():
-            plots.append(_corrected_zeros(stored, name, zero, number))
+            columns.append([_corrected_zeros(stored, name, zero, number)])
+    plots = []
     if np.isfinite(np.asarray(table["dp"], dtype=float)[polarised]).any():
         plots.append(_polarised(stored, name, polarised, number))
     left_out = _left_out(stored, name, rows, number)
-    return [*plots, *([left_out] if left_out else [])]
+    plots += [left_out] if left_out else []
+    return [*columns, plots] if plots else columns
 
 
 def _result_row(stored: Stored, row: int) -> int | None:
@@ -121,7 +123,7 @@ def _rows_figure(number: int, width: float = 3.9, panels: int = 2) -> tuple[Any,
     figure = new_figure(width, 0.75 + 0.3 * max(number, 2))
     height = figure.get_figheight()
     axes = figure.subplots(1, panels, sharey=True, squeeze=False)[0]
-    figure.subplots_adjust(left=0.24, right=0.97, bottom=0.5 / height, top=1 - 0.08 / height, wspace=0.12)
+    figure.subplots_adjust(left=0.26, right=0.97, bottom=0.5 / height, top=1 - 0.08 / height, wspace=0.12)
     return figure, axes
 
 

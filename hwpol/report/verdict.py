@@ -22,7 +22,7 @@ def verdict(stored: Stored) -> list[tuple[str, Markup]]:
     return [
         ("Reduced", Markup(escape(_reduced(stored)))),
         ("Calibration", _calibration(stored)),
-        ("Not to be trusted", Markup(escape(_doubts(stored)))),
+        ("Not to be trusted", _doubts(stored)),
     ]
 
 
@@ -113,6 +113,10 @@ def _calibration(stored: Stored) -> Markup:
 def _worst_standard(stored: Stored) -> Markup:
     table = stored.standards.table
     sigma = np.asarray(table["sigma"], dtype=float) if len(table) else np.empty(0)
+    # A fit without freedom meets its standards exactly, which says nothing.
+    filters = (stored.calibration or {}).get("filters", {})
+    free = [int(filters.get(str(name), {}).get("dof", 0)) > 0 for name in table["filter"]]
+    sigma = np.where(np.asarray(free, dtype=bool) | ~np.asarray(table["used"], dtype=bool), sigma, np.nan)
     if not np.isfinite(sigma).any():
         return Markup()
     row = int(np.nanargmax(sigma))
@@ -121,9 +125,9 @@ def _worst_standard(stored: Stored) -> Markup:
     )
 
 
-def _doubts(stored: Stored) -> str:
+def _doubts(stored: Stored) -> Markup:
     table = stored.results.table
-    sentences: list[str] = []
+    parts: dict[str, list[Markup]] = {"": [], "Take care: ": []}
     flags = np.asarray(table["flags"]) if len(table) else np.empty(0, dtype=int)
     for level, lead in ((BROKEN, ""), (CARE, "Take care: ")):
         for flag in Flag:
@@ -133,16 +137,18 @@ def _doubts(stored: Stored) -> str:
             if not len(rows):
                 continue
             words = flag_words(int(flag))[0]
-            sentences.append(f"{lead}{words.words} ({_which(stored, rows)})")
-            lead = ""
+            parts[lead].append(
+                Markup('<a href="#flag-{}">{}</a> ({})').format(words.name, words.words, _which(stored, rows))
+            )
     doubted = [
         f"{row['name']} in {row['filter']} ({row['doubt']})" for row in stored.standards.table if str(row["doubt"])
     ]
     if doubted:
-        sentences.append(f"standards in doubt: {listed(doubted, 3)}")
+        parts["Take care: "].append(escape(f"standards in doubt: {listed(doubted, 3)}"))
+    sentences = [escape(lead) + Markup("; ").join(found) + "." for lead, found in parts.items() if found]
     if not sentences:
-        return "Nothing that the checks could find."
-    return "; ".join(sentences).replace("; Take care", ". Take care") + "."
+        return Markup("Nothing that the checks could find.")
+    return Markup(" ").join(sentences)
 
 
 def _which(stored: Stored, rows: Any) -> str:
