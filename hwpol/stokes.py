@@ -147,8 +147,8 @@ class Stokes:
     mjd : array_like, optional
     calibration_covariance : array_like, optional, shape S + (2, 2)
         Part of the error that comes from the calibration and is shared by all values of a filter.
-    spread : array_like
-        Full spread (deg) of chi or of eta - chi over the frames behind a value.
+    spread, turn : array_like
+        Full spread (deg) of chi, and of eta - chi, over the frames behind a value.
     flags : array_like of int
         Bits of `hwpol.Flag`.
     name : str
@@ -175,6 +175,7 @@ class Stokes:
     mjd: Any = None
     calibration_covariance: Array | None = None
     spread: Any = 0.0
+    turn: Any = 0.0
     flags: Any = 0
     name: str = ""
     chi2: Any = None
@@ -213,7 +214,7 @@ class Stokes:
                 plain(self.calibration_covariance), (*q.shape, 2, 2)
             ).copy()
         values["flags"] = np.broadcast_to(np.asarray(self.flags, dtype=int), q.shape).copy()
-        values["spread"] = plain(self.spread, "deg")
+        values["spread"], values["turn"] = plain(self.spread, "deg"), plain(self.turn, "deg")
         for name, value in values.items():
             object.__setattr__(self, name, value)
 
@@ -330,7 +331,7 @@ class Stokes:
         for name in ("q", "u", "covariance", "i", "v", "calibration_covariance", "flags", "chi2", "dof"):
             value = getattr(self, name)
             changes[name] = value if value is None or np.ndim(value) == 0 else value[index]
-        for name in ("x", "y", "mjd", "position_angle", "parallactic", "spread"):
+        for name in ("x", "y", "mjd", "position_angle", "parallactic", "spread", "turn"):
             value = getattr(self, name)
             if value is not None and np.shape(value)[:1] == self.shape[:1] and self.shape:
                 if np.shape(value) == self.shape:
@@ -394,7 +395,7 @@ class Stokes:
             value = getattr(self, name)
             if value is not None:
                 changes[name] = value.reshape(size, *value.shape[-2:])
-        for name in ("position_angle", "parallactic", "spread", "mjd"):
+        for name in ("position_angle", "parallactic", "spread", "turn", "mjd"):
             value = getattr(self, name)
             if value is not None and np.ndim(value) > 0:
                 changes[name] = np.broadcast_to(value, self.shape).reshape(size)

@@ -3,13 +3,17 @@
 from __future__ import annotations
 
 import argparse
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 from hwpol.commands import ASIDE, DONE
 from hwpol.commands.running import add_execution, executor_for
-from hwpol.commands.screen import Steps, calibration_lines, notes, standards_table, table
+from hwpol.commands.screen import Steps, calibration_lines, degrees, notes, standards_table, table, with_error
 from hwpol.errors import ConfigError, InputError
+
+#: Chance below which a night is said to depart from the others.
+DEPARTS = 1e-3
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -51,6 +55,9 @@ def run(options: argparse.Namespace) -> int:
         print("\nCalibration from these standards:")
         for line in calibration_lines(check.calibration):
             print(f"  {line}")
+    if check.agreement:
+        print("\nEach night against the others:")
+        print(_agreement(check.agreement))
     text = notes(check.notes)
     if text:
         print(f"\n{text}")
@@ -58,6 +65,18 @@ def run(options: argparse.Namespace) -> int:
         print(f"Written: {path}")
     doubted = any(str(text) for text in check.standards["doubt"]) if len(check.standards) else True
     return ASIDE if doubted or check.calibration is None else DONE
+
+
+def _agreement(rows: Sequence[Mapping[str, Any]]) -> str:
+    shown = [
+        [str(row["night"]), str(row["filter"]), with_error(row["d_ip_q"], row["d_ip_q_err"]),
+         with_error(row["d_ip_u"], row["d_ip_u_err"]), degrees(row["d_zero_angle"], row["d_zero_angle_err"]),
+         f"{row['d_efficiency']:+.4f}",
+         "agrees" if not row["chance"] < DEPARTS else f"departs (chance {row['chance']:.1g})"]
+        for row in rows
+    ]  # fmt: skip
+    head = ["night", "filter", "d ip q (%)", "d ip u (%)", "d zero (deg)", "d efficiency", "remarks"]
+    return table(head, shown)
 
 
 def _list(options: argparse.Namespace) -> int:

@@ -208,7 +208,7 @@ class Calibration:
         """Bring observed q, u from the instrument frame to the sky.
 
         The random covariance is carried along; what the calibration adds goes to `calibration_covariance`. A spread of
-        chi or eta above 1 deg within a value is flagged, and so are values outside the calibration's times or field.
+        chi above 1 deg within a value is flagged (of eta - chi too, where a part turns with the telescope), and so are values outside the calibration's times or field.
         v is not calibrated; it changes its sign in a mirrored image.
 
         Raises
@@ -256,7 +256,10 @@ class Calibration:
         if stokes.mjd is not None and np.isfinite(model.mjd).all():
             mjd = np.broadcast_to(stokes.mjd, stokes.shape)
             outside |= (mjd < model.mjd[0] - SAME_NIGHT) | (mjd > model.mjd[1] + SAME_NIGHT)
-        turned = np.broadcast_to(np.asarray(stokes.spread) > ROTATION_LIMIT, stokes.shape)
+        turned = np.asarray(stokes.spread) > ROTATION_LIMIT
+        if model.frame != "instrument":
+            turned = turned | (np.asarray(stokes.turn) > ROTATION_LIMIT)
+        turned = np.broadcast_to(turned, stokes.shape)
         return flags | np.where(outside, int(Flag.OUTSIDE_CALIBRATION), 0) | np.where(turned, int(Flag.ROTATION), 0)
 
     def sky_jacobian(self, stokes: Stokes) -> Array:
@@ -283,7 +286,7 @@ class Calibration:
         Rotation within a value was part of that solve and is not flagged.
         """
         covariance = self.calibration_covariance(stokes)
-        flags = self._flags(replace(stokes, spread=0.0), self.model(stokes.filter))
+        flags = self._flags(replace(stokes, spread=0.0, turn=0.0), self.model(stokes.filter))
         return replace(stokes, calibration_covariance=covariance, flags=flags)
 
     def shared_covariance(self, stokes: Sequence[Stokes]) -> Array:

@@ -258,7 +258,8 @@ def _label(
         frame=frame,
         position_angle=chi,
         parallactic=None if np.isnan(eta) else eta,
-        spread=np.nanmax([chi_spread, 0.0 if np.isnan(turn_spread) else turn_spread]),
+        spread=chi_spread,
+        turn=0.0 if np.isnan(turn_spread) else turn_spread,
         sense=fluxes.sense,
         filter=fluxes.filter,
         x=fluxes.x,
@@ -304,6 +305,7 @@ def _per_cycle(fluxes: Fluxes, *, method: str, gain: str, circular: bool, calibr
         filter=first.filter, x=fluxes.x, y=fluxes.y,
         mjd=None if np.all(np.isnan(times)) else np.asarray(times),
         calibration_covariance=stack("calibration_covariance"), spread=np.asarray([part.spread for part in parts]),
+        turn=np.asarray([part.turn for part in parts]),
         flags=stack("flags"), name=first.name, chi2=stack("chi2"), dof=stack("dof"),
     )  # fmt: skip
 

@@ -113,7 +113,7 @@ def _misfits(fluxes: Fluxes, kept: NDArray[np.bool_], gain: str, calibration: An
     """Misfit (K,) of each frame to the prediction of the other kept ones, and its degrees of freedom."""
     frames = fluxes.shape[1]
     misfit, dof = np.zeros(frames), np.zeros(frames, dtype=int)
-    for k in np.flatnonzero(kept):
+    for k in map(int, np.flatnonzero(kept)):
         others = kept.copy()
         others[k] = False
         misfit[k], dof[k] = _misfit(fluxes, others, k, gain, calibration, None)

@@ -63,7 +63,7 @@ def find_calibration(
     for item in measured:
         if item.role.entry is None:
             continue
-        value = observed_value(item, demodulation)
+        value = observed_value(item, demodulation, frame)
         if isinstance(value, Stokes) and not np.isfinite(value.q).all():
             notes.append(
                 f"{item.name}, visit {item.visit}: its angles do not determine q and u; not used as a standard"
@@ -93,11 +93,12 @@ def find_calibration(
     return calibration, notes
 
 
-def observed_value(item: Measured, demodulation: DemodulationConfig) -> Stokes | Fluxes:
-    """Observed Stokes of a standard, or its fluxes where the field turned within the visit."""
+def observed_value(item: Measured, demodulation: DemodulationConfig, frame: str) -> Stokes | Fluxes:
+    """Observed Stokes of a standard, or its fluxes where its field (or the telescope) turned within the visit."""
     _, spread = mean_angle(item.fluxes.position_angle)
     _, turn = mean_angle(item.fluxes.parallactic - item.fluxes.position_angle)
-    if np.nanmax([spread, 0.0 if np.isnan(turn) else turn]) > ROTATION_LIMIT / 10:
+    turn = 0.0 if np.isnan(turn) or frame == "instrument" else turn
+    if max(spread, turn) > ROTATION_LIMIT / 10:
         return item.fluxes
     stokes = _solve(item.fluxes, None, demodulation)
     extra = np.diag(np.asarray(item.drift, dtype=float) ** 2)

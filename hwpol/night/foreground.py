@@ -74,12 +74,14 @@ def remove_foreground(
 
 def _where(chosen: NDArray[np.bool_], yes: Stokes, no: Stokes) -> Stokes:
     matrix = chosen[:, None, None]
-    both = yes.calibration_covariance, no.calibration_covariance
+    shared = no.calibration_covariance
+    if yes.calibration_covariance is not None and shared is not None:
+        shared = np.where(matrix, yes.calibration_covariance, shared)
     return replace(
         no,
         q=np.where(chosen, yes.q, no.q),
         u=np.where(chosen, yes.u, no.u),
         covariance=np.where(matrix, yes.covariance, no.covariance),
-        calibration_covariance=None if both[0] is None or both[1] is None else np.where(matrix, *both),
+        calibration_covariance=shared,
         flags=np.where(chosen, yes.flags, no.flags),
     )

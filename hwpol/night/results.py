@@ -16,6 +16,7 @@ from hwpol.flags import Flag, flag_names
 from hwpol.fluxes import Fluxes
 from hwpol.frames import FrameSet
 from hwpol.night.config_objects import NightConfig
+from hwpol.night.excess import night_excess, with_excess
 from hwpol.night.foreground import find_foreground, remove_foreground
 from hwpol.night.roles import Role
 from hwpol.night.rows import cycle_rows, result_rows
@@ -69,9 +70,17 @@ def assemble(
     rows: list[dict[str, Any]] = []
     cycles: list[dict[str, Any]] = []
     solutions = []
-    for visit in visits:
-        known = calibration is not None and visit.filter in calibration.filters
-        solution = _solve(config, visit, calibration if known else None)
+    usable = {visit.filter: calibration for visit in visits if calibration and visit.filter in calibration.filters}
+    raw = [_solve(config, visit, usable.get(visit.filter)) for visit in visits]
+    excess = night_excess(raw)
+    if excess.factor > 1:
+        words.append(
+            f"repeats scatter {np.sqrt(excess.factor):.2f} times as much as their counts allow over the whole night "
+            f"(chance {excess.chance:.0e}): all errors are at least that much larger than the counts' own"
+        )
+    for visit, measured in zip(visits, raw, strict=True):
+        known = visit.filter in usable
+        solution = with_drift(with_excess(measured, excess), visit.drift, usable.get(visit.filter))
         foreground, why = find_foreground(
             config.correction.foreground, solution, len(visit.names), calibration if known else None
         )
@@ -127,14 +136,13 @@ def _calibration_name(config: NightConfig, calibration: Calibration | None) -> s
 
 def _solve(config: NightConfig, visit: VisitResult, calibration: Calibration | None) -> VisitSolution:
     options = config.demodulation
-    solution = solve_visit(
+    return solve_visit(
         visit.fluxes,
         method=options.method,
         gain="fixed" if options.gain == "night" else options.gain,
         circular=options.circular,
         calibration=calibration,
     )
-    return with_drift(solution, visit.drift, calibration)
 
 
 def with_drift(solution: VisitSolution, drift: Array, calibration: Calibration | None) -> VisitSolution:
