@@ -18,19 +18,23 @@ from hwpol.night.config_objects import PhotometryConfig, TargetConfig
 from hwpol.night.images import VisitImages
 from hwpol.night.picture import FieldPicture, field_picture
 from hwpol.night.radius import LADDER, RadiusChoice, choose_radius
-from hwpol.photometry.measure import Measurement, Stars, measure
-from hwpol.photometry.neighbours import contamination, ratio_error
+from hwpol.night.seeing import frame_seeing, is_extended
+from hwpol.night.sources import (
+    field_sources,
+    find_targets,
+    foreign_error,
+    hint_of,
+    kept_from_sky,
+    neighbour_flags,
+    without_neighbours,
+)
+from hwpol.photometry.measure import Measurement, measure
+from hwpol.photometry.scene import REMAINS
 from hwpol.pixels import Box
-from hwpol.registration import Placement, register
+from hwpol.registration import Placement, deeper_stars, register
 
 Array = NDArray[np.float64]
 
-#: Pixels within which a star is taken for the target at a given place.
-NEAR_XY = 12.0
-#: Seconds of arc within which a star is taken for the target at a place from world coordinates.
-NEAR_SKY = 12.0
-#: Fraction of the fwhm within which a detected star and a place are one source.
-SAME_STAR = 0.5
 #: Full width taken where no star tells it, pixels.
 UNKNOWN_FWHM = 4.0
 
@@ -117,51 +121,62 @@ def reduce_visit(task: VisitTask) -> VisitResult:
     images = VisitImages(task.frames, task.calibrator)
     instrument = task.frames.instrument
     world = read_world(task.frames.table["file"][0], instrument.extension_of(0))
-    hints = [_hint(target, task.frames, world) for target in task.targets]
-    placement = place(task, images, hints)
+    hints = [hint_of(target, task.frames, world) for target in task.targets]
+    sections = [_section(task.frames, b) for b in range(len(instrument.beams))]
+    placement = place(task, images, hints, sections)
     fwhm = float(np.nanmedian(placement.fwhm)) if np.isfinite(placement.fwhm).any() else UNKNOWN_FWHM
     notes = list(placement.notes)
 
-    x, y, flags = _targets(task, placement, hints, instrument.detector.pixel_scale, notes)
+    x, y, flags = find_targets(task.targets, placement, hints, instrument.detector.pixel_scale, notes)
     px, py = placement.positions(x, y)
-    stars = _known_stars(placement, fwhm)
-    sections = [_section(task.frames, b) for b in range(len(instrument.beams))]
-    ring = tuple(extent.pixels(fwhm) for extent in task.photometry.annulus)
-    best = task.photometry.radius.unit == "best"
-    multiples = LADDER if best else np.unique(np.append(LADDER, task.photometry.radius.pixels(fwhm) / fwhm))
-    radii = multiples * fwhm
+    photometry = task.photometry
+    best = photometry.radius.unit == "best"
+    multiples = LADDER if best else np.unique(np.append(LADDER, photometry.radius.pixels(fwhm) / fwhm))
+    seeing = _seeing(task, placement, fwhm)
     options: dict[str, Any] = {
-        "annulus": ring,
         "hdu_of_beam": images.hdu_of_beam,
         "sections": sections,
-        "stars": stars,
+        "stars": kept_from_sky(placement, fwhm),
         "hits": task.hits,
     }
-    measured = measure(images, px, py, radii=radii, **options)
-    foreign = np.stack([_foreign(placement, images, x, y, fwhm, radius) for radius in radii])
+
+    def measured_at(px: Array, py: Array, multiples: Array, seeing: Array) -> Measurement:
+        ring = np.array([[extent.pixels(width) for width in seeing] for extent in photometry.annulus])
+        result = measure(images, px, py, radii=multiples[:, None] * seeing, annulus=ring, **options)
+        return without_neighbours(result, images, placement, px, py, sections)
+
+    measured = measured_at(px, py, multiples, seeing)
+    if np.ptp(seeing) > 0 and is_extended(measured.fwhm[0], placement.fwhm):
+        notes.append(f"{task.targets[0].name}: wider than the stars; its aperture does not follow the seeing")
+        seeing = np.full(len(seeing), fwhm)
+        measured = measured_at(px, py, multiples, seeing)
+    radii = multiples * float(np.median(seeing))
+    foreign = np.stack([foreign_error(placement, images, x, y, fwhm, radius) for radius in radii])
     choice = choose_radius(
         [_fluxes(task, measured, r, x[:1], y[:1], slice(0, 1)) for r in range(len(radii))],
         multiples,
-        foreign[:, 0],
+        REMAINS * foreign[:, 0],
         method=task.method,
         gain=task.gain,
     )
-    index = choice.index if best else int(np.argmin(np.abs(radii - task.photometry.radius.pixels(fwhm))))
+    index = choice.index if best else int(np.argmin(np.abs(multiples - photometry.radius.pixels(fwhm) / fwhm)))
     if best and not choice.plateau:
         flags[0] |= int(Flag.NO_PLATEAU)
     fluxes = _fluxes(task, measured, index, x, y, slice(None))
 
-    if task.photometry.sources == "field":
-        more_x, more_y = _field(placement, x, y, fwhm)
+    if photometry.sources == "field":
+        more_x, more_y = field_sources(placement, x, y, fwhm)
         if len(more_x):
             fx, fy = placement.positions(more_x, more_y)
-            field = measure(images, fx, fy, radii=radii[index : index + 1], **options)
+            field = measured_at(fx, fy, multiples[index : index + 1], seeing)
             fluxes = _join(fluxes, _fluxes(task, field, 0, more_x, more_y, slice(None)))
             flags = np.append(flags, np.zeros(len(more_x), dtype=int))
-    drift = np.repeat(_foreign(placement, images, fluxes.x, fluxes.y, fwhm, float(radii[index]))[:, None], 2, axis=1)
-    flags |= _neighbour_flags(fluxes, drift[:, 0])
+    alien = foreign_error(placement, images, fluxes.x, fluxes.y, fwhm, float(radii[index]))
+    flags |= neighbour_flags(fluxes, alien)
+    drift = np.repeat(REMAINS * alien[:, None], 2, axis=1)
     if best:
         drift[0] = np.hypot(drift[0], choice.drift)
+    ring = [extent.pixels(float(np.median(seeing))) for extent in photometry.annulus]
     if task.calibrator.noise_doubtful:
         flags |= int(Flag.NOISE_DOUBTFUL)
     ra, dec = _coordinates(task, world, fluxes)
@@ -193,19 +208,21 @@ def reduce_visit(task: VisitTask) -> VisitResult:
     )
 
 
-def place(task: VisitTask, images: VisitImages, hints: list[tuple[float, float] | None]) -> Placement:
-    """Register the frames of a visit."""
+def place(
+    task: VisitTask, images: VisitImages, hints: list[tuple[float, float] | None], sections: list[Section | None]
+) -> Placement:
+    """Register the frames of a visit; its stars are those that the sharpest frames show."""
     instrument = task.frames.instrument
     moving = any(target.moving for target in task.targets)
     plate, mjd = task.frames.column("psi"), task.frames.column("mjd")
-    strips = [_section(task.frames, b) for b in range(len(instrument.beams))]
-    return register(
+    strips = [None if s is None else Box(s.x0, s.y0, s.x1, s.y1) for s in sections]
+    placement = register(
         images,
         len(task.frames),
         len(instrument.beams),
         nominal_offsets=[beam.offset for beam in instrument.beams],
         hdu_of_beam=images.hdu_of_beam,
-        sections=[None if s is None else Box(s.x0, s.y0, s.x1, s.y1) for s in strips],
+        sections=strips,
         method=task.registration,
         header_shifts=_header_shifts(task) if task.registration == "header" else None,
         target=hints[0],
@@ -213,6 +230,17 @@ def place(task: VisitTask, images: VisitImages, hints: list[tuple[float, float] 
         psi=plate if np.isfinite(plate).all() else None,
         times=(mjd - mjd[0]) * 1440.0 if np.isfinite(mjd).all() else None,
     )
+    return replace(placement, stars=deeper_stars(placement, images, images.hdu_of_beam, strips))
+
+
+def _seeing(task: VisitTask, placement: Placement, fwhm: float) -> Array:
+    """Width of each frame that apertures given in fwhm follow; one for all where they should not."""
+    # A moving target may be a comet, and may be all the light there is: its width is not the seeing's.
+    fixed = task.photometry.radius.unit == "pixel" or any(target.moving for target in task.targets)
+    width = frame_seeing(placement.fwhm)
+    if fixed or not np.isfinite(width).all():
+        return np.full(len(width), fwhm)
+    return width
 
 
 def _header_shifts(task: VisitTask) -> Array:
@@ -230,115 +258,6 @@ def _header_shifts(task: VisitTask) -> Array:
         world = read_world(file, extension)
         shifts.append([np.nan, np.nan] if world is None else np.ravel(world.pixel(ra, dec)) - (first.wcs.wcs.crpix - 1))
     return np.asarray(shifts)
-
-
-def _hint(target: TargetConfig, frames: FrameSet, world: World | None) -> tuple[float, float] | None:
-    if target.xy is not None:
-        return float(target.xy[0]), float(target.xy[1])
-    if world is None:
-        return None
-    ra = target.ra if target.ra is not None else float(frames.table["ra"][0])
-    dec = target.dec if target.dec is not None else float(frames.table["dec"][0])
-    if not np.isfinite([ra, dec]).all():
-        return None
-    x, y = world.pixel(ra, dec)
-    if not np.isfinite([x[0], y[0]]).all():
-        return None
-    text = str(frames.table["shape"][0])
-    sides = [float(part) for part in text.replace("x", " ").split() if part.strip().isdigit()]
-    inside = len(sides) < 2 or (-0.5 < x[0] < sides[0] and -0.5 < y[0] < sides[1])
-    return (float(x[0]), float(y[0])) if inside else None
-
-
-def _targets(
-    task: VisitTask,
-    placement: Placement,
-    hints: list[tuple[float, float] | None],
-    pixel_scale: float | None,
-    notes: list[str],
-) -> tuple[Array, Array, NDArray[np.int_]]:
-    """Pixels of the targets in the first beam and frame, and the flags of how they were found."""
-    stars = placement.stars
-    x, y, flags = [], [], []
-    for target, hint in zip(task.targets, hints, strict=True):
-        flag = 0
-        place_ = hint
-        if hint is not None and len(stars):
-            near = NEAR_XY if target.xy is not None or not pixel_scale else max(NEAR_XY, NEAR_SKY / pixel_scale)
-            distance = np.hypot(stars.x - hint[0], stars.y - hint[1])
-            nearest = int(np.argmin(distance))
-            if distance[nearest] <= near:
-                place_ = float(stars.x[nearest]), float(stars.y[nearest])
-            elif target.xy is None:
-                place_ = None
-                notes.append(
-                    f"{target.name}: no star within {near:.0f} pixels of its coordinates; "
-                    "taken for the brightest source that has its partner in every beam"
-                )
-            else:
-                flag |= int(Flag.NOT_FOUND)
-        if place_ is None:
-            if not len(stars):
-                raise InputError(
-                    f"{target.name}: no star was found in the first frame of its visit and its place is not known; "
-                    "give [[target]] xy = [x, y]"
-                )
-            flag |= int(Flag.POSITION_GUESSED)
-            brightest = int(np.argmax(stars.flux))
-            place_ = float(stars.x[brightest]), float(stars.y[brightest])
-            if hint is None:
-                notes.append(
-                    f"{target.name}: place guessed from the brightest source that has its partner in every beam"
-                )
-        x.append(place_[0])
-        y.append(place_[1])
-        flags.append(flag)
-    return np.asarray(x), np.asarray(y), np.asarray(flags, dtype=int)
-
-
-def _known_stars(placement: Placement, fwhm: float) -> Stars | None:
-    stars = placement.stars
-    if not len(stars):
-        return None
-    x, y = placement.positions(stars.x, stars.y)
-    # A star ten times brighter is felt half a width further out (wings of a Moffat profile against the noise).
-    reach = 1.5 + 0.5 * np.log10(np.maximum(np.nan_to_num(stars.snr, nan=10.0) / 10.0, 1.0))
-    return Stars(x, y, np.minimum(reach, 3.5) * fwhm)
-
-
-def _foreign(placement: Placement, images: VisitImages, x: Array, y: Array, fwhm: float, radius: float) -> Array:
-    """Error of q that other stars' light can make in apertures of sources at (x, y) of the first frame, shape (S,)."""
-    stars = placement.stars
-    if not len(stars):
-        return np.zeros(len(x))
-    alone = np.hypot(stars.x[:, None] - x, stars.y[:, None] - y).min(axis=0) > SAME_STAR * fwhm
-    everyone_x, everyone_y = np.append(stars.x, x[alone]), np.append(stars.y, y[alone])
-    flux = np.append(stars.flux, np.full(int(alone.sum()), np.nanmin(stars.flux)))
-    px, py = placement.positions(everyone_x, everyone_y)
-    share = contamination(
-        px[:, :1], py[:, :1], np.repeat(flux[:, None], px.shape[2], axis=1), fwhm, radius,
-        plane_of_beam=images.hdu_of_beam,
-    )  # fmt: skip
-    error = np.nan_to_num(ratio_error(share, np.nanmedian(placement.fwhm, axis=1)))
-    nearest = np.hypot(everyone_x[:, None] - x, everyone_y[:, None] - y).argmin(axis=0)
-    return np.asarray(error[nearest])
-
-
-def _neighbour_flags(fluxes: Fluxes, error: Array) -> NDArray[np.int_]:
-    """NEIGHBOUR where other stars can change q by more than its photon error."""
-    with np.errstate(invalid="ignore", divide="ignore"):
-        counts = np.nansum(fluxes.flux, axis=(1, 2))
-        photon = np.sqrt(2 * np.nansum(fluxes.variance, axis=(1, 2))) / counts
-    return np.where(error > photon, int(Flag.NEIGHBOUR), 0)
-
-
-def _field(placement: Placement, x: Array, y: Array, fwhm: float) -> tuple[Array, Array]:
-    """First-beam positions of the field's stars, brightest first, without the targets."""
-    stars = placement.stars
-    distance = np.hypot(stars.x[:, None] - x, stars.y[:, None] - y).min(axis=1, initial=np.inf)
-    chosen = np.flatnonzero(distance > max(2.0, 0.5 * fwhm))
-    order = chosen[np.argsort(-stars.flux[chosen], kind="stable")]
-    return stars.x[order], stars.y[order]
 
 
 def _section(frames: FrameSet, beam: int) -> Section | None:
