@@ -14,7 +14,7 @@ from astropy.table import QTable, Table
 
 from hwpol.errors import InputError
 from hwpol.flags import FLAG_TEXT, Flag
-from hwpol.products.writing import whole
+from hwpol.products.writing import whole, write_fits
 from hwpol.schema import TABLES, Column
 
 FORMATS = {"ecsv": ".ecsv", "fits": ".fits", "votable": ".vot"}
@@ -73,7 +73,7 @@ def write_table(table: Table, path: str | Path) -> Path:
         if target.suffix == ".ecsv":
             table.write(temporary, format="ascii.ecsv", overwrite=True)
         elif target.suffix == ".fits":
-            _to_hdu(table).writeto(temporary, overwrite=True, checksum=True)
+            write_fits(fits.HDUList([fits.PrimaryHDU(), _to_hdu(table)]), temporary)
         elif target.suffix == ".vot":
             _to_votable(table).to_xml(str(temporary))
         else:

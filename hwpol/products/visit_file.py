@@ -13,7 +13,7 @@ from astropy.table import Table
 from numpy.typing import NDArray
 
 from hwpol.errors import InputError
-from hwpol.products.writing import whole
+from hwpol.products.writing import whole, write_fits
 
 Array = NDArray[np.float64]
 
@@ -151,7 +151,7 @@ def write_visit(visit: VisitFile, path: str | Path) -> Path:
         field.header["STEP"] = visit.picture_step, "[pix] side of an element"
         hdus.append(field)
     with whole(path) as temporary:
-        fits.HDUList(hdus).writeto(temporary, overwrite=True, checksum=True)
+        write_fits(fits.HDUList(hdus), temporary)
     return Path(path)
 
 

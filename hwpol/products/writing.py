@@ -7,6 +7,7 @@ import os
 import tempfile
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 from hwpol.errors import InputError
 
@@ -38,6 +39,13 @@ def whole(path: str | Path) -> Iterator[Path]:
         raise InputError(f"{target}: cannot be written ({problem.strerror or problem})") from None
     finally:
         temporary.unlink(missing_ok=True)
+
+
+def write_fits(hdus: Any, path: Path) -> None:
+    """Write an astropy HDUList with checksums; the same content makes the same bytes, whatever the hour."""
+    for hdu in hdus:
+        hdu.add_checksum(when="checksum of the HDU")
+    hdus.writeto(path, overwrite=True)
 
 
 def write_text(path: str | Path, text: str) -> None:

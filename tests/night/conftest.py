@@ -133,3 +133,25 @@ def shipped():
     from hwpol.simulate import shipped_scenarios
 
     return lambda name: tomllib.loads(shipped_scenarios()[name].read_text(encoding="utf-8"))
+
+
+@pytest.fixture
+def variant(reduced_night):
+    """A function: reduce the reduced night once more with changes (old text, new text) to its night file.
+
+    Nothing is written; visits that the changes leave alone are taken up.
+    """
+    from hwpol import Night
+
+    path, _ = reduced_night
+
+    def reduce(*changes):
+        text = path.read_text(encoding="utf-8")
+        for old, new in changes:
+            assert old in text
+            text = text.replace(old, new)
+        other = path.with_name("variant.toml")
+        other.write_text(text, encoding="utf-8")
+        return Night.read(other).reduce(write=False)
+
+    return reduce
