@@ -141,11 +141,39 @@ STANDARDS: tuple[Column, ...] = _columns(
     ("reference", "text", "", "meta.bib", "where the catalogue value was published"),
 )
 
+INJECT: tuple[Column, ...] = _columns(
+    ("target", "text", "", "meta.id;meta.main", "name of the target whose visit holds the artificial star"),
+    ("star", "integer", "", "meta.number", "number of the artificial star in its visit and repeat, from 1"),
+    ("filter", "text", "", "meta.id;instr.filter", "filter as in the header"),
+    ("visit", "integer", "", "meta.number", "visit, from 1"),
+    ("repeat", "integer", "", "meta.number", "realisation: places, polarisation and photon noise, from 1"),
+    ("step", "integer", "", "meta.number", "step of brightness of the artificial star, from 1 for the brightest"),
+    ("x", "number", "pix", "pos.cartesian.x;instr.det", "x in the first beam and first frame of the visit, 0-based"),
+    ("y", "number", "pix", "pos.cartesian.y;instr.det", "y in the first beam and first frame of the visit, 0-based"),
+    ("true_flux", "number", "electron / s", "phot.count", "light put in, all beams together, mean over the frames"),
+    ("flux", "number", "electron / s", "phot.count", "source, all beams together, mean over the frames"),
+    ("flux_ratio", "number", "", "arith.ratio", "flux over the share of the light put in that the aperture holds"),
+    ("snr", "number", "", "stat.snr", "flux over its error"),
+    ("frame", "text", "", "meta.code", "sky where calibrated, instrument where no calibration applied"),
+    ("true_q", "number", "", _Q, "Q/I put in"),
+    ("true_u", "number", "", _U, "U/I put in"),
+    ("q", "number", "", _Q, "Q/I"),
+    ("u", "number", "", _U, "U/I"),
+    ("q_err", "number", "", _ERR_Q, "adopted random error of q"),
+    ("u_err", "number", "", _ERR_U, "adopted random error of u"),
+    ("qu_cov", "number", "", "stat.covariance", "adopted random covariance of q and u"),
+    ("pull_q", "number", "", "stat.value", "measured minus put in, in units of the random error of q"),
+    ("pull_u", "number", "", "stat.value", "measured minus put in, in units of the random error of u"),
+    ("frames", "integer", "", "meta.number", "frames used"),
+    ("flags", "integer", "", "meta.code", "bits named in the table's metadata"),
+)
+
 TABLES: dict[str, tuple[Column, ...]] = {
     "results": RESULTS,
     "cycles": CYCLES,
     "frames": FRAMES,
     "standards": STANDARDS,
+    "inject": INJECT,
 }
 
 
