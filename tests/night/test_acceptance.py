@@ -123,6 +123,8 @@ def test_demo(judge, night_of, shipped):
 @pytest.mark.slow
 def test_field_of_dozens_of_stars(judge, night_of, shipped):
     tree = shipped("field")
+    # Standards in the middle of the field alone cannot tell how the instrumental polarisation runs over it.
+    del tree["filters"]["V"]["ip_field"]
     tree.setdefault("night", {})["photometry"] = {"sources": "field"}
     _, answer, truth = night_of(tree)
     compared = check(judge, answer, truth)
