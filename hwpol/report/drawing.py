@@ -16,6 +16,7 @@ from hwpol.products import VisitFile
 from hwpol.report import figures
 from hwpol.report.stored import Stored
 from hwpol.report.style import COLOURS, MARKERS, VERMILION, inline_svg, new_figure
+from hwpol.report.words import listed
 
 Array = NDArray[np.float64]
 
@@ -64,8 +65,8 @@ def visit_plots(stored: Stored, visit: VisitFile) -> list[Plot]:
         plots.append(_modulation(visit, who))
     if np.isfinite(stored.results.table["q"][stored.target_row(visit.number)]):
         plots.append(_cycles(stored, visit, who))
-    plots.append(_series(visit, who))
-    return plots
+    series = _series(visit, who)
+    return [*plots, *([series] if series else [])]
 
 
 def off_the_fit(visit: VisitFile) -> list[str]:
@@ -81,7 +82,9 @@ def _stamps(visit: VisitFile, who: str) -> Plot:
     rows = -(-number // columns)
     figure = new_figure(3.9, 0.35 + 1.9 * rows)
     axes = figure.subplots(rows, columns, squeeze=False)
-    figure.subplots_adjust(left=0.09, right=0.99, bottom=0.09 / rows + 0.02, top=1 - 0.1 / rows, wspace=0.2, hspace=0.3)
+    figure.subplots_adjust(
+        left=0.09, right=0.965, bottom=0.09 / rows + 0.02, top=1 - 0.1 / rows, wspace=0.2, hspace=0.3
+    )
     for b, one in enumerate(axes.flat):
         if b >= number:
             one.set_axis_off()
@@ -129,7 +132,7 @@ def _radius(visit: VisitFile, who: str) -> Plot:
 
 
 def _modulation(visit: VisitFile, who: str) -> Plot:
-    figure, (top, bottom) = _pair()
+    figure, (top, bottom) = _pair(head=0.07 if len(visit.curves) == 1 else 0.26)
     psi = visit.frames["psi"]
     value, error, model = (visit.modulation[name] for name in ("value", "error", "model"))
     many = len(visit.curves)
@@ -143,7 +146,7 @@ def _modulation(visit: VisitFile, who: str) -> Plot:
     top.set_xlabel("")
     bottom.set_xlabel("wave-plate angle (deg)")
     if many > 1:
-        top.legend(ncols=2, loc="best")
+        top.legend(ncols=4, loc="lower left", bbox_to_anchor=(0.0, 1.0), borderaxespad=0.1)
     _aligned((top, bottom))
     what = (
         "Difference of the beams over their sum (their throughputs divided out)"
@@ -192,26 +195,37 @@ def _cycles(stored: Stored, visit: VisitFile, who: str) -> Plot:
     return Plot(inline_svg(figure, f"v{visit.number}-cycles", alt), caption)
 
 
-def _series(visit: VisitFile, who: str) -> Plot:
+def _series(visit: VisitFile, who: str) -> Plot | None:
     mjd = visit.frames["mjd"]
     known = np.isfinite(mjd).any()
     minutes = (mjd - np.nanmin(mjd)) * 1440 if known else np.arange(len(mjd), dtype=float)
     scale = visit.pixel_scale if np.isfinite(visit.pixel_scale) else 1.0
-    figure, axes = _pair(3.75, (1, 1, 1), 0.26)
-    figures.time_series(axes[0], minutes, visit.frames["sky"], names=visit.beams, label="sky (e⁻/pixel)")
-    figures.time_series(
-        axes[1], minutes, scale * visit.frames["fwhm"], label=f"seeing ({'″' if scale != 1.0 else 'pixels'})"
-    )
-    figures.time_series(axes[2], minutes, 100 * visit.frames["transparency"], label="transparency (%)")
-    if len(visit.beams) > 1:
-        axes[0].legend(ncols=4, loc="lower left", bbox_to_anchor=(0.0, 1.0), borderaxespad=0.1)
-    for one in axes:
+    panels = [
+        (visit.frames["sky"], "sky (e⁻/pixel)", "sky at the target"),
+        (
+            scale * visit.frames["fwhm"],
+            f"seeing ({'″' if scale != 1.0 else 'pixels'})",
+            "width of the stars at half maximum",
+        ),
+        (
+            100 * visit.frames["transparency"],
+            "transparency (%)",
+            "light received a second against its median over the visit",
+        ),
+    ]
+    panels = [panel for panel in panels if np.isfinite(panel[0]).any()]
+    if not panels:
+        return None
+    figure, axes = _pair(0.75 + len(panels), (1,) * len(panels), 0.26)
+    axes = np.atleast_1d(axes)
+    for one, (values, label, _) in zip(axes, panels, strict=True):
+        figures.time_series(one, minutes, values, names=visit.beams, label=label)
         one.locator_params(axis="y", nbins=4)
-    axes[2].set_xlabel(f"minutes from {utc(float(np.nanmin(mjd)))} UTC" if known else "frame")
+    if len(visit.beams) > 1 and panels[0][0].ndim == 2:
+        axes[0].legend(ncols=4, loc="lower left", bbox_to_anchor=(0.0, 1.0), borderaxespad=0.1)
+    axes[-1].set_xlabel(f"minutes from {utc(float(np.nanmin(mjd)))} UTC" if known else "frame")
     _aligned(axes)
-    caption = (
-        "Sky at the target, width of the stars at half maximum, and light received a second against its median over "
-        "the visit."
-    )
+    words = listed([text for *_, text in panels])
+    caption = f"{words[0].upper()}{words[1:]}."
     alt = f"{who}: sky, seeing and transparency against time"
     return Plot(inline_svg(figure, f"v{visit.number}-series", alt), caption)

@@ -17,6 +17,8 @@ Array = NDArray[np.float64]
 
 #: Sources needed to tell how the sky lies on the detector.
 ENOUGH = 4
+#: Width of a map, inches: one that can still be read on a phone.
+WIDTH = 5.4
 #: Largest misfit (arcsec) of a linear map between sky and pixels that still counts as one.
 FIT = 2.0
 
@@ -51,18 +53,18 @@ def field_plot(stored: Stored, visit: VisitFile | None, number: int) -> Plot | N
     }
     matrix = sky_on_pixels(column["x"], column["y"], column["ra"], column["dec"])
     on_sky = str(table["frame"][rows[0]]) == "sky"
-    figure = new_figure(7.6, 6.4)
+    figure = new_figure(WIDTH, 0.85 * WIDTH)
     axes = figure.subplots()
     options: dict[str, Any] = {} if matrix is None else {"to_pixels": matrix}
     if visit is not None and visit.picture is not None:
         ny, nx = visit.picture.shape
-        figure.set_size_inches(7.6, 1.1 + 6.6 * min(max(ny / nx, 0.3), 1.3))
+        figure.set_size_inches(WIDTH, 1.05 + 0.87 * WIDTH * min(max(ny / nx, 0.3), 1.3))
         options |= {"picture": visit.picture, "corner": visit.picture_corner, "step": visit.picture_step}
     else:
         axes.set_xlim(np.nanmin(column["x"]) - 20, np.nanmax(column["x"]) + 20)
         axes.set_ylim(np.nanmin(column["y"]) - 20, np.nanmax(column["y"]) + 20)
     height = figure.get_figheight()
-    figure.subplots_adjust(left=0.09, right=0.98, bottom=0.5 / height, top=1 - 0.55 / height)
+    figure.subplots_adjust(left=0.11, right=0.98, bottom=0.5 / height, top=1 - 0.55 / height)
     figures.vector_map(
         axes, column["x"], column["y"], column["p_debiased"], column["p_err"], column["theta"],
         **options,

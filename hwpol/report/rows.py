@@ -10,7 +10,7 @@ from scipy.stats import chi2
 
 from hwpol.flags import Flag
 from hwpol.report.drawing import utc
-from hwpol.report.numbers import Cell, Sheet
+from hwpol.report.numbers import UNKNOWN, Cell, Sheet
 from hwpol.report.standing import calibration_plots, html
 from hwpol.report.stored import Stored
 from hwpol.report.verdict import DOUBT, calibration_cell, fit_words
@@ -51,17 +51,26 @@ def polarisation_cells(sheet: Sheet, row: int) -> dict[str, Any]:
 def target_rows(stored: Stored, rows: list[int]) -> list[dict[str, Any]]:
     """The table at the top."""
     sheet = stored.results
+    one_night = len({utc(sheet.number(row, "mjd") - 0.5, "%Y-%m-%d") for row in rows}) == 1
+    form = "%H:%M" if one_night else "%m-%d %H:%M"
     return [
         {
             "target": sheet.text(row, "target"),
             "filter": sheet.text(row, "filter"),
             "role": sheet.text(row, "role"),
             "visit": int(sheet.table["visit"][row]),
+            "time": time_cell(sheet, row, form),
             "cycles": sheet.plain(row, "cycles", 0),
             **polarisation_cells(sheet, row),
         }
         for row in rows
     ]
+
+
+def time_cell(sheet: Sheet, row: int, form: str = "%Y-%m-%d %H:%M") -> Cell:
+    """The middle of a measurement, UTC."""
+    value = sheet.number(row, "mjd")
+    return Cell(f"{sheet.name}/{row}/mjd", value, utc(value, form) if np.isfinite(value) else UNKNOWN)
 
 
 def field_rows(stored: Stored, number: int) -> dict[str, Any]:
@@ -93,13 +102,16 @@ def visit_facts(stored: Stored, number: int) -> dict[str, Any]:
         ("seeing", sheet.plain(row, "fwhm", 1), "pixels"),
         ("signal", sheet.significant(row, "flux"), "e⁻/s"),
     ]
+    table = sheet.table
+    others = [str(t) for t in table["target"][(table["visit"] == number) & (table["source"] == 0)]][1:]
     start = f"visit {number} ("
     return {
         "number": number,
         "target": sheet.text(row, "target"),
         "filter": sheet.text(row, "filter"),
         "role": sheet.text(row, "role"),
-        "time": utc(sheet.number(row, "mjd")),
+        "time": time_cell(sheet, row),
+        "others": others,
         "facts": [(name, cell, unit) for name, cell, unit in facts if np.isfinite(cell.value)],
         "notes": [str(note).split("): ", 1)[-1] for note in stored.run.get("notes", []) if str(note).startswith(start)],
         **polarisation_cells(sheet, row),

@@ -80,7 +80,9 @@ def _observed_zeros(stored: Stored, name: str, rows: Any, number: int) -> Plot:
     )  # fmt: skip
     entry = (stored.calibration or {}).get("filters", {}).get(name, {})
     ip = [float(entry.get(key, np.nan)) for key in ("ip_q", "ip_u", "ip_q_err", "ip_u_err")]
-    if np.isfinite(ip[:2]).all():
+    # What turns with the telescope is elsewhere for every star: no one point stands for it.
+    turning = "tel_q" in entry
+    if np.isfinite(ip[:2]).all() and not turning:
         matrix = np.diag(np.nan_to_num(ip[2:]) ** 2)[None]
         figures.q_u_plane(
             axes,
@@ -93,10 +95,16 @@ def _observed_zeros(stored: Stored, name: str, rows: Any, number: int) -> Plot:
             filled_ellipse=True,
             zero=False,
         )
-    axes.legend(loc="best")
+    if not turning:
+        axes.legend(loc="best")
+    fitted = (
+        "the telescope's polarisation turns against it from star to star"
+        if turning
+        else "with the instrumental polarisation fitted to them"
+    )
     caption = (
-        "Unpolarised stars as observed, in the instrument's frame, and the instrumental polarisation fitted to them; "
-        "68 % ellipses by the random errors. Empty: not used."
+        f"Unpolarised stars as observed, in the instrument's frame; {fitted}. 68 % ellipses by the random errors. "
+        "Empty: not used."
     )
     return Plot(inline_svg(figure, f"c{number}-observed", f"{name}: zero-polarised stars in the q-u plane"), caption)
 

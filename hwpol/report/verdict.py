@@ -89,12 +89,15 @@ def _calibration(stored: Stored) -> Markup:
     parts = []
     for name, entry in filters.items():
         part = Markup("<b>{}</b>: ").format(name)
-        if np.isfinite(float(entry.get("ip_q", np.nan))):
-            size = [calibration_cell(name, entry, key) for key in ("ip_q", "ip_q_err", "ip_u", "ip_u_err")]
-            size[1], size[3] = (
-                calibration_cell(name, entry, f"{key}_err", error=f"{key}_err") for key in ("ip_q", "ip_u")
-            )
-            part += Markup("instrument adds q {} ± {} %, u {} ± {} %, ").format(*size)
+        for who, first in (("instrument", "ip"), ("telescope", "tel")):
+            if np.isfinite(float(entry.get(f"{first}_q", np.nan))):
+                part += Markup("{} adds q {} ± {} %, u {} ± {} %, ").format(
+                    who,
+                    *(
+                        calibration_cell(name, entry, f"{first}_{key}", error=f"{first}_{key[0]}_err")
+                        for key in ("q", "q_err", "u", "u_err")
+                    ),
+                )
         angle_err = calibration_cell(name, entry, "zero_angle_err", "degrees", "zero_angle_err")
         if np.isfinite(angle_err.value):
             part += Markup("zero angle {} ± {}°; ").format(

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.collections import LineCollection
 from matplotlib.patches import Circle
 from numpy.typing import ArrayLike, NDArray
 
-from hwpol.report.style import BLACK, BLUE, ORANGE, VERMILION
+from hwpol.report.style import BLACK, BLUE, ORANGE, RASTER_ABOVE, VERMILION
 
 #: Vectors are drawn for p above this many of its errors (common practice).
 SIGNIFICANT = 3.0
@@ -101,7 +102,7 @@ def vector_map(
     weak = np.isfinite(px) & np.isfinite(py) & ~strong
     axes.plot(
         px[weak], py[weak], linestyle="none", marker="o", markersize=4, markerfacecolor="none",
-        markeredgecolor=BLUE, markeredgewidth=0.9,
+        markeredgecolor=BLUE, markeredgewidth=0.9, rasterized=bool(weak.sum() > RASTER_ABOVE),
     )  # fmt: skip
     matrix = np.asarray(to_pixels, dtype=float)
     left, right = axes.get_xlim()
@@ -115,10 +116,14 @@ def vector_map(
     half = 0.5 * length * size[strong] * direction / np.maximum(np.hypot(*direction), 1e-12)
     start, end = np.stack([px, py])[:, strong] - half, np.stack([px, py])[:, strong] + half
     # White below colour keeps a vector visible on stars and sky alike.
+    segments = np.stack([start.T, end.T], axis=1)
     for colour, line in (("white", 3.0), (VERMILION, 1.5)):
-        axes.plot(
-            np.stack([start[0], end[0]]), np.stack([start[1], end[1]]), color=colour, linewidth=line,
-            solid_capstyle="butt", rasterized=bool(strong.sum() > 500),
+        axes.add_collection(
+            LineCollection(
+                list(segments), colors=colour, linewidths=line, capstyle="butt", zorder=2,
+                rasterized=bool(strong.sum() > RASTER_ABOVE),
+            ),
+            autolim=False,
         )  # fmt: skip
     axes.set_xlim(left, right)
     axes.set_ylim(below, above)

@@ -65,9 +65,14 @@ def q_u_plane(
         for centre_x, centre_y, matrix in zip(x, y, np.asarray(covariance, dtype=float), strict=True):
             if np.isfinite([centre_x, centre_y]).all() and np.isfinite(matrix).all():
                 axes.add_patch(_ellipse(centre_x, centre_y, matrix, colour, filled_ellipse))
+    middle = (np.nanmin(x[seen]) + np.nanmax(x[seen])) / 2 if seen.any() else 0.0
     for text, a, b in zip(labels or (), x, y, strict=False):
         if np.isfinite([a, b]).all():
-            axes.annotate(text, (a, b), xytext=(5, 4), textcoords="offset points", fontsize=7.5, parse_math=False)
+            # Towards the middle, so that none runs out of the axes.
+            side, way = (-5, "right") if a > middle else (5, "left")
+            axes.annotate(
+                text, (a, b), xytext=(side, 4), textcoords="offset points", ha=way, fontsize=7.5, parse_math=False
+            )
     if zero:
         axes.axhline(0, color=FAINT, linewidth=0.7, zorder=0)
         axes.axvline(0, color=FAINT, linewidth=0.7, zorder=0)
