@@ -40,6 +40,8 @@ class ApertureSums:
     usable : ndarray of bool, shape (S, R)
         No pixel SATURATED, COSMIC_RAY or OUTSIDE, and at most `MOST_REPAIRED` BAD ones, all
         bridged and none in the core.
+    photons, squares : ndarray, shape (S, R)
+        Sum of w^2 max(d, 0), what the pixels' own counts gave the variance, and sum of w^2.
     """
 
     flux: Floats
@@ -47,6 +49,8 @@ class ApertureSums:
     area: Floats
     bad: NDArray[np.intp]
     usable: NDArray[np.bool_]
+    photons: Floats
+    squares: Floats
 
 
 def nearest_pixel(x: Floats) -> NDArray[np.intp]:
@@ -198,7 +202,13 @@ def aperture_sums(
         raise InputError(f"aperture radii = {rs.tolist()}: expected pixels > 0")
     count, shape = len(xs), (len(xs), len(rs))
     out = ApertureSums(
-        np.empty(shape), np.empty(shape), np.empty(shape), np.zeros((*shape, 4), np.intp), np.empty(shape, np.bool_)
+        flux=np.empty(shape),
+        variance=np.empty(shape),
+        area=np.empty(shape),
+        bad=np.zeros((*shape, 4), np.intp),
+        usable=np.empty(shape, np.bool_),
+        photons=np.empty(shape),
+        squares=np.empty(shape),
     )
     inner = 0.5 * float(rs.min()) if core is None else core
     half = window(float(rs.max())) + 1  # one pixel more: neighbours of a bad pixel at the rim
@@ -236,7 +246,10 @@ def _sum_block(
         clean = overlap if not len(flawed) else overlap * weight_of_pixel[:, cut, cut]
         flat = clean.reshape(len(x), -1)
         out.flux[part, r] = (flat * data[:, cut, cut].reshape(len(x), -1)).sum(axis=1)
-        out.variance[part, r] = (flat**2 * variance[:, cut, cut].reshape(len(x), -1)).sum(axis=1)
+        square = flat**2
+        out.variance[part, r] = (square * variance[:, cut, cut].reshape(len(x), -1)).sum(axis=1)
+        out.photons[part, r] = (square * np.maximum(data[:, cut, cut], 0.0).reshape(len(x), -1)).sum(axis=1)
+        out.squares[part, r] = square.sum(axis=1)
         out.area[part, r] = flat.sum(axis=1)
         out.usable[part, r] = True
         if len(flawed):

@@ -147,7 +147,9 @@ def measure(
         raise InputError(f"beams: positions have {beams}, hdu_of_beam {len(hdu)}, sections {len(strips)}")
     if stars is None:
         stars = Stars(xs, ys, np.full(len(xs), float(sizes.max())))
-    work = _Work(images, xs, ys, sizes, ring, hdu, strips, stars, stamps if stamps is not None else len(xs) <= FEW)
+    few = stamps if stamps is not None else len(xs) <= FEW
+    unlit = np.full((len(sizes), *xs.shape), np.nan)
+    work = _Work(images, xs, ys, sizes, ring, hdu, strips, stars, few, unlit)
     result, cut = work.run()
     return work.judge(result, cut, hits)
 
@@ -181,6 +183,7 @@ class _Work:
     strips: list[Section | None]
     stars: Stars
     stamps: bool
+    unlit: Floats
 
     def run(self) -> tuple[Measurement, _Cut]:
         """Sum everything, frame by frame; what spoils a frame is noted but not yet acted on."""
@@ -249,6 +252,8 @@ class _Work:
         at = (slice(None), part, k, b)
         result.flux[at] = (sums.flux - sums.area * sky.level[:, None]).T
         result.variance[at] = (sums.variance + (sums.area * sky.error[:, None]) ** 2).T
+        # Light of the sky in place of the pixels' own counts; the star's own follows in `expected`.
+        self.unlit[at] = (sums.squares * sky.level[:, None] - sums.photons).T
         result.area[at] = sums.area.T
         result.flags[at] = _cause(sums, sky).T
         for name, value in (("sky", sky.level), ("sky_err", sky.error), ("sky_std", sky.std)):
@@ -283,8 +288,40 @@ class _Work:
         flags = flags & ~_SPOILED_BY_BAD | np.bitwise_or.reduce(spoiled, axis=-1, keepdims=True)
         lost = (spoiled != 0) | ~np.isfinite(result.flux)
         blank = np.where(lost.any(axis=-1, keepdims=True), np.nan, 1.0)
-        return replace(result, flux=result.flux * blank, variance=result.variance * blank, flags=flags)
+        flux, variance = result.flux * blank, result.variance * blank
+        return replace(result, flux=flux, variance=expected_variance(flux, variance, self.unlit), flags=flags)
 
+
+def expected_variance(flux: Floats, variance: Floats, unlit: Floats) -> Floats:
+    """Variance with the light expected in place of the light counted.
+
+    A pixel's own counts overrate its variance where there is little light, for they are taken as 0 where noise makes
+    them negative, and they tie a flux to its own weight. The sky of the annulus and the star's flux stand for them:
+    the flux itself where it is significant, else its mean over the frames of that beam.
+
+    Parameters
+    ----------
+    flux, variance : ndarray, shape (R, S, K, B)
+        Electrons; electrons squared, with the pixels' own counts.
+    unlit : ndarray, shape (R, S, K, B)
+        What is to be added for a star without light: sum w^2 (sky - max(d, 0)).
+
+    Returns
+    -------
+    ndarray, shape (R, S, K, B)
+    """
+    known = np.isfinite(flux)
+    count = np.maximum(known.sum(axis=2, keepdims=True), 1)
+    mean = np.maximum(np.where(known, flux, 0.0).sum(axis=2, keepdims=True) / count, 0.0)
+    with np.errstate(invalid="ignore"):
+        light = np.where(flux > _OWN_FLUX * np.sqrt(variance), flux, mean)
+        faint = flux < _ALL_LIGHT * np.sqrt(variance)
+        # Half the counted variance is far beyond what any expectation may take away.
+        return np.where(faint, np.maximum(variance + unlit + light, 0.5 * variance), variance)
+
+
+_OWN_FLUX = 5.0  # sigma from which a flux stands for its own expectation
+_ALL_LIGHT = 100.0  # sigma from which counts below zero no longer matter: well under a percent of the variance
 
 _SPOILED_BY_BAD = 1 << 62  # bookkeeping within this module: bad pixels that could not be bridged
 
