@@ -18,6 +18,8 @@ _SHARP = 0.6
 _ONE_PIXEL = 1.25
 # Share of one pixel in its 3 x 3: 0.41 for a star of 1.3 pixels centred on it, 1 for a hot pixel.
 _LONE = 0.55
+# Worth of a claim of twice the scale beside an equal one.
+_COARSER = 0.9
 _MOST_MEASURED = 3000
 
 
@@ -156,7 +158,8 @@ def _field_width(flat: Pixels, bad: Bools) -> float | None:
         level = binned(flat, n)
     if not found:
         return None
-    table = np.array(sorted(found, reverse=True))
+    # A photon-limited star is as significant on any scale that holds it: the finer one is its own.
+    table = np.array(sorted(found, key=lambda claim: claim[0] * _COARSER ** np.log2(claim[3] / 2.2), reverse=True))
     tree = cKDTree(table[:, 1:3])
     free, taken = np.ones(len(table), bool), np.zeros(len(table), bool)
     for i in range(len(table)):
