@@ -57,7 +57,9 @@ def covariances(table: Any, rows: Any) -> Array:
 
 def visit_plots(stored: Stored, visit: VisitFile) -> list[Plot]:
     """All figures of one visit."""
-    who = f"{visit.target}, {visit.filter}, visit {visit.number}"
+    # The names of the table: a FITS file cannot hold every letter.
+    table, row = stored.results.table, stored.target_row(visit.number)
+    who = f"{table['target'][row]}, {table['filter'][row]}, visit {visit.number}"
     plots = [_stamps(visit, who)]
     if np.isfinite(visit.growth).any():
         plots.append(_radius(visit, who))
