@@ -98,7 +98,8 @@ def choose_radius(
     first = _first(multiples, errors, usable, alien)
     # Where other stars come in, q and u follow them and not the source: no plateau is looked for out there.
     usable &= alien <= np.maximum(1.5 * alien[first], 0.3 * float(np.max(errors[first])))
-    number, plateau = first, len(_members(multiples, usable, first)) < 2
+    alone = len(_members(multiples, usable, first)) < 2
+    number, plateau = first, alone and bool(usable[first])
     for r in range(first, len(multiples)):
         members = _members(multiples, usable, r)
         if usable[r] and len(members) > 1 and not _sloped(curve, value, covariance, members):
