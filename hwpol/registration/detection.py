@@ -19,7 +19,7 @@ _ONE_PIXEL = 1.25
 # Share of one pixel in its 3 x 3: 0.41 for a star of 1.3 pixels centred on it, 1 for a hot pixel.
 _LONE = 0.55
 # Worth of a claim of twice the scale beside an equal one.
-_COARSER = 0.9
+_COARSER = 0.8
 _MOST_MEASURED = 3000
 
 
