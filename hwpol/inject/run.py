@@ -38,7 +38,7 @@ from hwpol.products import make_table, write_table, write_text
 
 Array = NDArray[np.float64]
 
-HISTORY = "hwpol inject: artificial stars added to this copy; it is not an observation"
+HISTORY = "hwpol inject: artificial stars added to this copy, not an observation"
 
 
 @dataclass(frozen=True)
