@@ -19,12 +19,15 @@ from hwpol.stokes import ROTATION_LIMIT, carry, instrument_from_sky, real_slopes
 Array = NDArray[np.float64]
 
 
-def half_turn_null(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None) -> tuple[Array, Array]:
+def half_turn_null(
+    fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None, circular: bool = False
+) -> tuple[Array, Array]:
     """Null (q, u) from positions psi mod 180 below and above 90 deg, instrument frame.
 
-    With a calibration the halves are solved for the sky, so that a field that turns does not make a null; the
-    difference is brought back to the instrument frame at the mean angle. Without one a field that turns by more
-    than 1 deg has no null.
+    Circular light changes its sign from one half to the other where the plate is not a perfect half-wave plate:
+    with `circular` it is solved for in both and makes no null. With a calibration the halves are solved for the
+    sky, so that a field that turns does not make a null; the difference is brought back to the instrument frame at
+    the mean angle. Without one a field that turns by more than 1 deg has no null.
 
     Returns
     -------
@@ -33,21 +36,23 @@ def half_turn_null(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = No
         NaN where the halves do not both determine q and u.
     """
     psi = np.mod(fluxes.wave_plate + 1e-6, 180.0)
-    return _null(fluxes, psi < 90.0, gain, calibration)
+    return _null(fluxes, psi < 90.0, gain, calibration, circular)
 
 
-def time_null(fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None) -> tuple[Array, Array]:
+def time_null(
+    fluxes: Fluxes, *, gain: str = "visit", calibration: Any = None, circular: bool = False
+) -> tuple[Array, Array]:
     """Null (q, u) from the first half of the cycles against the second; as `half_turn_null`."""
     cycles = np.unique(fluxes.cycle)
-    return _null(fluxes, np.isin(fluxes.cycle, cycles[: len(cycles) // 2]), gain, calibration)
+    return _null(fluxes, np.isin(fluxes.cycle, cycles[: len(cycles) // 2]), gain, calibration, circular)
 
 
-def _null(fluxes: Fluxes, first: NDArray[np.bool_], gain: str, calibration: Any) -> tuple[Array, Array]:
+def _null(fluxes: Fluxes, first: NDArray[np.bool_], gain: str, calibration: Any, circular: bool) -> tuple[Array, Array]:
     sources = fluxes.shape[0]
     if not first.any() or first.all():
         return np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
-    one = fit_counts(fluxes.take_frames(first), gain=gain, calibration=calibration).stokes
-    other = fit_counts(fluxes.take_frames(~first), gain=gain, calibration=calibration).stokes
+    one = fit_counts(fluxes.take_frames(first), gain=gain, calibration=calibration, circular=circular).stokes
+    other = fit_counts(fluxes.take_frames(~first), gain=gain, calibration=calibration, circular=circular).stokes
     difference = (one.z - other.z) / 2
     covariance = (one.random_covariance + other.random_covariance) / 4
     chi = one.position_angle

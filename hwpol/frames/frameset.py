@@ -161,7 +161,8 @@ class FrameSet:
         """Return the cycles of this one visit, with the plate angles each has and lacks."""
         plate = self.instrument.wave_plate
         tolerance = 1.0 if plate is None else plate.tolerance
-        return grouping.summarise(self.column("cycle"), self.column("position"), self.column("psi"), tolerance)
+        psi = grouping.within_turn(self.column("psi"), tolerance)
+        return grouping.summarise(self.column("cycle"), self.column("position"), psi, tolerance)
 
     def _used(self) -> NDArray[np.bool_]:
         return self.column("status") == "used"
@@ -276,7 +277,10 @@ def _group(table: dict[str, NDArray[Any]], instrument: Instrument, gap: float) -
         if instrument.wave_plate is None:
             table["position"][frames] = 1
         else:
-            table["position"][frames] = grouping.positions(table["psi"][frames], instrument.wave_plate.tolerance)
+            table["position"][frames] = grouping.positions(
+                grouping.within_turn(table["psi"][frames], instrument.wave_plate.tolerance),
+                instrument.wave_plate.tolerance,
+            )
         table["cycle"][frames] = grouping.cycles(table["position"][frames], table["mjd"][frames])
 
 

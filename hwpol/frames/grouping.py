@@ -30,6 +30,9 @@ _RARE = 0.34  # positions seen less often than this part of the median are no pa
 _ROUNDING = 1e-9
 _SECONDS = 86400.0
 
+#: Share of a full turn's steps that distinct plate angles must fill to count as positions of one full turn.
+FULL_TURN = 0.6
+
 
 def visits(
     names: Sequence[str], filters: Sequence[str], mjd: ArrayLike, exposure: ArrayLike, gap: float
@@ -107,6 +110,24 @@ def positions(psi: ArrayLike, tolerance: float) -> NDArray[np.int64]:
     for number, group in enumerate(sorted(groups, key=lambda members: position_angle(angles[members], tolerance)), 1):
         numbers[group] = number
     return numbers
+
+
+def within_turn(psi: ArrayLike, tolerance: float) -> NDArray[np.float64]:
+    """Plate angles as positions of a visit count them, deg: modulo 360, or modulo 180 where half turns repeat.
+
+    A plate turned by 180 deg modulates as before. Where the distinct angles fill most of the full turn's steps they
+    are positions of their own (sixteen over a full turn); where a few come again half a turn on (an encoder that
+    counts on over several turns) the later ones repeat the earlier.
+    """
+    angles = np.mod(np.asarray(psi, dtype=float), 360.0)
+    known = angles[np.isfinite(angles)]
+    full = positions(known, tolerance)
+    number = len(set(full.tolist()))
+    if number < 2 or len(set(positions(2 * known, 2 * tolerance).tolist())) == number:
+        return angles
+    centres = np.sort([position_angle(known[full == one], tolerance) for one in set(full.tolist())])
+    step = float(np.min(np.diff(centres, append=centres[0] + 360.0)))
+    return angles if number * step > FULL_TURN * 360.0 else np.mod(angles + tolerance, 180.0) - tolerance
 
 
 def position_angle(psi: NDArray[np.float64], tolerance: float) -> float:

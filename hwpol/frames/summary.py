@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from hwpol.frames.calibrator import Calibrator
 from hwpol.frames.frameset import FrameSet
 from hwpol.frames.geometry import airmass_of, time_warning
-from hwpol.frames.grouping import position_angle
+from hwpol.frames.grouping import position_angle, within_turn
 from hwpol.instrument.description import Instrument
 
 _LISTED = 8  # files named before the rest is only counted
@@ -181,6 +181,7 @@ def _angles(frames: FrameSet) -> list[float]:
     plate, place, psi = frames.instrument.wave_plate, frames.column("position"), frames.column("psi")
     if plate is None:
         return []
+    psi = within_turn(psi, plate.tolerance)
     return [round(position_angle(psi[place == p], plate.tolerance), 1) for p in np.unique(place[place > 0])]
 
 

@@ -109,7 +109,7 @@ def solve_visit(
     covariance = stokes.covariance.copy()
     covariance[..., :2, :2] = np.where(repeats[:, None, None], adopted, count)
 
-    null, null_covariance, photon, ratio, ratio_err = _diagnose(used, gain, calibration)
+    null, null_covariance, photon, ratio, ratio_err = _diagnose(used, gain, calibration, circular)
     flags = stokes.flags.copy()
     complete = _complete_cycles(fluxes)
     flags |= np.where(complete.all(), 0, int(Flag.INCOMPLETE_CYCLE))
@@ -141,14 +141,14 @@ def solve_visit(
     )
 
 
-def _diagnose(fluxes: Fluxes, gain: str, calibration: Any) -> tuple[Array, Array, Array, Array, Array]:
+def _diagnose(fluxes: Fluxes, gain: str, calibration: Any, circular: bool) -> tuple[Array, Array, Array, Array, Array]:
     sources, _, beams = fluxes.shape
     try:
         solution = fit_counts(fluxes, gain=gain)
     except InputError:
         nothing, matrix = np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
         return nothing, matrix, matrix, np.full((sources, beams), np.nan), np.full((sources, beams), np.nan)
-    null, null_covariance = half_turn_null(fluxes, gain=gain, calibration=calibration)
+    null, null_covariance = half_turn_null(fluxes, gain=gain, calibration=calibration, circular=circular)
     return null, null_covariance, photon_covariance(fluxes, solution, gain=gain), solution.gain, solution.gain_err
 
 
