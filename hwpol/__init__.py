@@ -25,11 +25,17 @@ _HOMES = {
 __all__ = ["__version__", *_HOMES]
 
 
+# What must be loaded beside a name for it to work in full.
+_COMPANIONS = {"Fluxes": "hwpol.demodulation", "Calibration": "hwpol.demodulation"}
+
+
 def __getattr__(name: str) -> Any:
     if name == "__version__":
         from importlib.metadata import version
 
         return version("hwpol")
+    if name in _COMPANIONS:
+        import_module(_COMPANIONS[name])
     if name in _HOMES:
         return getattr(import_module(_HOMES[name]), name)
     raise AttributeError(f"module 'hwpol' has no attribute {name!r}")

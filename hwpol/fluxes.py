@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
-from importlib import import_module
 from typing import Any
 
 import numpy as np
@@ -13,6 +13,13 @@ from hwpol.errors import InputError
 from hwpol.stokes import plain
 
 Array = NDArray[np.float64]
+
+_SOLVERS: list[Callable[..., Any]] = []
+
+
+def register_solver(solver: Callable[..., Any]) -> None:
+    """Make known what solves fluxes; `hwpol.demodulation` does so when it is loaded."""
+    _SOLVERS[:] = [solver]
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -185,8 +192,16 @@ class Fluxes:
         )
 
     def demodulated(self, calibration: Any = None) -> Any:
-        """Solve by least squares: what `hwpol.demodulate` does, for those who must not import it."""
-        return import_module("hwpol.demodulation").demodulate(self, calibration=calibration)
+        """Solve by least squares: what `hwpol.demodulate` does, for those who must not import it.
+
+        Raises
+        ------
+        InputError
+            Before `hwpol.demodulation` was loaded.
+        """
+        if not _SOLVERS:
+            raise InputError("these fluxes are not demodulated yet; call hwpol.demodulate on them first")
+        return _SOLVERS[-1](self, calibration=calibration)
 
     def take_frames(self, index: Any) -> Fluxes:
         """Return only some frames (a mask or indices along the frame axis)."""

@@ -5,6 +5,7 @@ from hwpol.demodulation.limits import photon_covariance
 from hwpol.demodulation.modulation import modulation_rows
 from hwpol.demodulation.nulls import half_turn_null, time_null
 from hwpol.demodulation.plate import Suspect, plate_suspects
+from hwpol.fluxes import register_solver
 
 __all__ = [
     "Solution",
@@ -17,3 +18,5 @@ __all__ = [
     "plate_suspects",
     "time_null",
 ]
+
+register_solver(demodulate)
