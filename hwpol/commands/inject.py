@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import argparse
+import textwrap
 from typing import Any
 
 from hwpol.commands import ASIDE, DONE
 from hwpol.commands.running import add_execution, executor_for
-from hwpol.commands.screen import Steps, notes, percent, table, with_error
+from hwpol.commands.screen import WIDTH, Steps, notes, percent, table, with_error
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -47,7 +48,7 @@ def run(options: argparse.Namespace) -> int:
     print(steps_table([*done.steps, done.together]))
     print()
     for line in done.words:
-        print(line)
+        print(textwrap.fill(line, WIDTH))
     text = notes(done.notes)
     if text:
         print(f"\n{text}")
