@@ -15,7 +15,7 @@ from hwpol.flags import Flag
 from hwpol.products import VisitFile
 from hwpol.report import figures
 from hwpol.report.stored import Stored
-from hwpol.report.style import COLOURS, MARKERS, VERMILION, inline_svg, new_figure
+from hwpol.report.style import COLOURS, MARKERS, VERMILION, few_ticks, inline_svg, new_figure
 from hwpol.report.words import listed
 
 Array = NDArray[np.float64]
@@ -222,7 +222,7 @@ def _series(visit: VisitFile, who: str) -> Plot | None:
     axes = np.atleast_1d(axes)
     for one, (values, label, _) in zip(axes, panels, strict=True):
         figures.time_series(one, minutes, values, names=visit.beams, label=label)
-        one.locator_params(axis="y", nbins=4)
+        one.yaxis.set_major_locator(few_ticks(4))
     if len(visit.beams) > 1 and panels[0][0].ndim == 2:
         axes[0].legend(ncols=4, loc="lower left", bbox_to_anchor=(0.0, 1.0), borderaxespad=0.1)
     axes[-1].set_xlabel(f"minutes from {utc(float(np.nanmin(mjd)))} UTC" if known else "frame")

@@ -12,7 +12,7 @@ from scipy.stats import chi2
 from hwpol.report import figures
 from hwpol.report.drawing import Plot, covariances
 from hwpol.report.stored import Stored
-from hwpol.report.style import BLUE, COLOURS, FAINT, MARKERS, VERMILION, inline_svg, new_figure
+from hwpol.report.style import BLUE, COLOURS, FAINT, MARKERS, VERMILION, few_ticks, inline_svg, new_figure
 
 #: Rows drawn at most in one figure of dots.
 MOST_ROWS = 40
@@ -151,7 +151,7 @@ def _polarised(stored: Stored, name: str, rows: Any, number: int) -> Plot:
     right.set_xlabel("θ: residual (deg)")
     for one in (left, right):
         one.axvline(0, color=FAINT, linewidth=0.8, zorder=0)
-        one.locator_params(axis="x", nbins=4)
+        one.xaxis.set_major_locator(few_ticks(3))
     caption = (
         "Polarised standards after calibration, measured minus catalogue; bars: random error and the catalogue's. "
         "Empty: not used."
@@ -175,7 +175,7 @@ def _left_out(stored: Stored, name: str, rows: Any, number: int) -> Plot | None:
         )  # fmt: skip
         axes.set_xlabel(f"{letter}: left out (%)")
         axes.axvline(0, color=FAINT, linewidth=0.8, zorder=0)
-        axes.locator_params(axis="x", nbins=4)
+        axes.xaxis.set_major_locator(few_ticks(3))
     caption = (
         "Each standard left out in turn: observed minus predicted from the others (instrument frame); bars: its own "
         "random error, without the prediction's."

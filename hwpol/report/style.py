@@ -10,6 +10,7 @@ import matplotlib as mpl
 from markupsafe import Markup, escape
 from matplotlib.backends.backend_svg import FigureCanvasSVG
 from matplotlib.figure import Figure
+from matplotlib.ticker import AutoLocator, MaxNLocator
 
 #: Colours that the colour-blind tell apart: Okabe & Ito (2008), "Color Universal Design", in the order used here.
 BLUE, ORANGE, GREEN, VERMILION, SKY, PURPLE, YELLOW, BLACK = (
@@ -68,11 +69,24 @@ def new_figure(width: float = 3.9, height: float = 3.1) -> Figure:
     return figure
 
 
+def few_ticks(number: int = 5) -> MaxNLocator:
+    """Where ticks go on a small figure: few, since every one takes room and most of the time of drawing."""
+    return MaxNLocator(nbins=number, steps=(1, 2, 2.5, 5, 10))
+
+
+def _few_ticks(figure: Figure) -> None:
+    for axes in figure.axes:
+        for axis in (axes.xaxis, axes.yaxis):
+            if type(axis.get_major_locator()) is AutoLocator:
+                axis.set_major_locator(few_ticks())
+
+
 def inline_svg(figure: Figure, name: str, alt: str) -> Markup:
     """The figure as part of a page: no outside names, ids that start with `name`, `alt` for those who do not see it.
 
     The same figure gives the same text.
     """
+    _few_ticks(figure)
     stream = io.StringIO()
     figure.savefig(
         stream, format="svg", transparent=True, metadata={"Date": None, "Creator": None, "Format": None, "Type": None}

@@ -8,7 +8,7 @@ from matplotlib.collections import LineCollection
 from matplotlib.patches import Circle
 from numpy.typing import ArrayLike, NDArray
 
-from hwpol.report.style import BLACK, BLUE, ORANGE, RASTER_ABOVE, VERMILION
+from hwpol.report.style import BLACK, BLUE, ORANGE, RASTER_ABOVE, VERMILION, few_ticks
 
 #: Vectors are drawn for p above this many of its errors (common practice).
 SIGNIFICANT = 3.0
@@ -50,7 +50,8 @@ def stamp(
         for ring in np.asarray(annulus, dtype=float):
             axes.add_patch(Circle((x, y), ring, fill=False, edgecolor=BLUE, linewidth=0.9, linestyle=(0, (4, 3))))
     axes.tick_params(labelsize=7)
-    axes.locator_params(nbins=4)
+    axes.xaxis.set_major_locator(few_ticks(3))
+    axes.yaxis.set_major_locator(few_ticks(3))
     return axes
 
 
