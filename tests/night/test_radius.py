@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from hwpol import Fluxes
-from hwpol.night.radius import LADDER, REACH, SAFE, choose_radius
+from hwpol.night.radius import LADDER, SAFE, choose_radius
 
 ANGLES = np.tile([0.0, 22.5, 45.0, 67.5], 3)
 
