@@ -22,6 +22,7 @@ from numpy.typing import ArrayLike, NDArray
 from hwpol.errors import InputError, MissingError
 from hwpol.frames import geometry, grouping
 from hwpol.frames.headers import Frame, read_frame
+from hwpol.frames.merging import stored
 from hwpol.instrument.description import Instrument
 from hwpol.instrument.names import normal_name
 
@@ -79,7 +80,7 @@ class FrameSet:
     @classmethod
     def read(
         cls,
-        paths: Iterable[str | Path],
+        paths: Iterable[Any],
         instrument: Instrument,
         *,
         gap: float = 60.0,
@@ -90,8 +91,9 @@ class FrameSet:
 
         Parameters
         ----------
-        paths : iterable of paths
-            FITS files, plain, gzipped or tile-compressed. A file given twice counts once.
+        paths : iterable of paths or CCDData
+            FITS files, plain, gzipped or tile-compressed. A file given twice counts once. A CCDData holds raw adu and
+            its header.
         instrument : Instrument
         gap : float
             Longest pause within a visit, minutes.
@@ -168,11 +170,13 @@ class FrameSet:
         return self.column("status") == "used"
 
 
-def _distinct(paths: Iterable[str | Path]) -> list[str | Path]:
+def _distinct(paths: Iterable[Any]) -> list[str | Path]:
     if isinstance(paths, str | os.PathLike):
         paths = [Path(paths)]
-    kept: dict[str, str | Path] = {}
+    kept: dict[str, Any] = {}
     for path in paths:
+        if hasattr(path, "to_hdu") and hasattr(path, "unit"):
+            path = stored(path, len(kept))
         if not isinstance(path, str | os.PathLike):
             raise InputError(f"frames: expected paths of FITS files, found {type(path).__name__}")
         kept.setdefault(os.path.realpath(path), path)

@@ -112,6 +112,8 @@ class Night:
         measured = self._measure(executor, only, fresh, progress)
         frames, roles = measured.frames, measured.roles
         notes = [*measured.notes]
+        if self.config.maps:
+            notes.append("[[map]]: this version makes no Stokes maps yet; the targets are measured in apertures alone")
         late = time_warning(frames.column("mjd")[frames.column("status") == "used"])
         if late and self.config.instrument.site is not None:
             notes.append(late)

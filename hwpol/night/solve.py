@@ -38,7 +38,8 @@ class VisitSolution:
         Adopted values and random covariance, on the sky where calibrated.
     observed : Stokes, shape (S,)
         Instrument frame, uncalibrated, from the counts.
-    cycles : Stokes, shape (S, C)
+    cycles, observed_cycles : Stokes, shape (S, C)
+        On the sky where calibrated; instrument frame, uncalibrated.
     kept : ndarray of bool, shape (S, C)
         Cycles that took part.
     count_covariance, scatter_covariance : ndarray, shape (S, 2, 2)
@@ -57,6 +58,7 @@ class VisitSolution:
     stokes: Stokes
     observed: Stokes
     cycles: Stokes
+    observed_cycles: Stokes
     kept: NDArray[np.bool_]
     count_covariance: Array
     scatter_covariance: Array
@@ -125,6 +127,7 @@ def solve_visit(
         stokes=replace(stokes, covariance=covariance, flags=flags),
         observed=observed,
         cycles=cycles,
+        observed_cycles=cycles if calibration is None else demodulate(fluxes, per="cycle", **options),
         kept=solvable & ~set_aside,
         count_covariance=count,
         scatter_covariance=np.where(repeats[:, None, None], scatter, np.nan),

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
+from unicodedata import combining, normalize
 
 import numpy as np
 from astropy.io import fits
@@ -95,8 +96,17 @@ def _standard(table: Table) -> tuple[Table, dict[str, str]]:
     return simple, texts
 
 
+def _ascii(text: str) -> str:
+    plain = "".join(letter for letter in normalize("NFKD", text) if not combining(letter))
+    return plain.encode("ascii", "replace").decode()
+
+
 def _to_hdu(table: Table) -> fits.BinTableHDU:
     simple, texts = _standard(table)
+    for name in simple.colnames:
+        if simple[name].dtype.kind == "U":
+            # FITS holds ASCII only: accents go, other letters become "?".
+            simple[name] = [_ascii(text) for text in simple[name].tolist()]
     hdu = fits.table_to_hdu(simple)
     for number, name in enumerate(table.colnames, start=1):
         ucd = table[name].meta.get("ucd", "")

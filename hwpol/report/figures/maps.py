@@ -97,6 +97,11 @@ def vector_map(
     size = np.asarray(p, dtype=float)
     if picture is not None:
         _image(axes, picture, np.asarray(corner, dtype=float), step)
+    elif np.isfinite(px).any():
+        # Without a picture the sources themselves make the frame, with a margin for their vectors.
+        margin = 0.08 * max(float(np.ptp(px[np.isfinite(px)])), float(np.ptp(py[np.isfinite(py)])), 1.0)
+        axes.set_xlim(np.nanmin(px) - margin, np.nanmax(px) + margin)
+        axes.set_ylim(np.nanmin(py) - margin, np.nanmax(py) + margin)
     axes.set_aspect("equal")
     with np.errstate(invalid="ignore"):
         strong = size >= SIGNIFICANT * np.asarray(p_err, dtype=float)
