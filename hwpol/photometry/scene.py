@@ -27,8 +27,11 @@ neighbours of a fifth of the light at 2.5 fwhm and ellipticities that follow no 
 
 _SAME = 0.4  # fwhm within which a star and a source are one
 _MARGIN = 0.75  # fwhm of sky kept beyond the furthest neighbour
-_MODELS = 8  # brightest stars whose images make the profile
-_TURNS = 3  # of fitting shapes on images freed of their neighbours
+_MODELS = 8  # brightest stars whose images make the profile ...
+_IMAGES = 240  # ... fewer where that makes more images than this
+_TRIED = 60  # images on which the profile's index is chosen and its correction found
+_CORE = 3.2  # fwhm to which images of model stars are fitted
+_TURNS = 2  # of fitting shapes on images freed of their neighbours
 _CUT = 4.0  # sigma beyond which a pixel has no say
 _MODEL_ERROR = 0.02  # fraction of the model allowed as its error in the fit of heights
 _FIRM = 25.0  # signal-to-noise ratio of an image from which its shape is taken
@@ -133,12 +136,11 @@ def foreign_light(
     ]
     if not sources:
         return out
-    models = np.argsort(-known.flux, kind="stable")[:_MODELS]
-    wanted = [(x[s], y[s], b) for s, b, _ in sources]
-    wanted += [(known.x[t], known.y[t], b) for t in models for b in range(x.shape[2])]
-    groups = work.load(wanted)
-    profile, shapes = _profile(groups[len(sources) :], width, typical)
-    for (s, b, _), group in zip(sources, groups[: len(sources)], strict=True):
+    models = np.argsort(-known.flux, kind="stable")[: int(np.clip(_IMAGES // (x.shape[1] * x.shape[2]), 1, _MODELS))]
+    groups = work.load([(x[s], y[s], b) for s, b, _ in sources], REACH + _MARGIN)
+    bright = work.load([(known.x[t], known.y[t], b) for t in models for b in range(x.shape[2])], _CORE)
+    profile, shapes = _profile(bright, width, typical)
+    for (s, b, _), group in zip(sources, groups, strict=True):
         _heights(group, profile, shapes)
         _sum(group, profile, shapes, radii, out, s, b)
     return out
@@ -152,23 +154,27 @@ class _Work:
     hdu: list[int]
     sections: list[Section | None]
 
-    def members(self, x: Floats, y: Floats, beam: int) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    def members(
+        self, x: Floats, y: Floats, beam: int, reach: float = REACH
+    ) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
         """Stars and beams of the images that come within reach of a place (K, B) in a beam."""
         beams = np.flatnonzero(np.asarray(self.hdu) == self.hdu[beam])
         distance = np.hypot(
             self.known.x[:, :, beams] - x[None, :, beam, None], self.known.y[:, :, beams] - y[None, :, beam, None]
         )
         distance = np.where(np.isfinite(distance), distance, np.inf)
-        near = (distance.min(axis=1) < REACH * self.typical) & (np.median(distance, axis=1) > _SAME * self.typical)
+        near = (distance.min(axis=1) < min(reach, REACH) * self.typical) & (
+            np.median(distance, axis=1) > _SAME * self.typical
+        )
         star, number = np.nonzero(near)
         return star, beams[number]
 
-    def load(self, wanted: list[tuple[Floats, Floats, int]]) -> list[_Group]:
-        """Stamps of all places, frame by frame so that each image is opened once."""
-        half = int(np.ceil((REACH + _MARGIN) * self.typical))
+    def load(self, wanted: list[tuple[Floats, Floats, int]], reach: float) -> list[_Group]:
+        """Stamps of `reach` fwhm about all places, frame by frame so that each image is opened once."""
+        half = int(np.ceil(reach * self.typical))
         groups = []
         for x, y, b in wanted:
-            star, beams = self.members(x, y, b)
+            star, beams = self.members(x, y, b, reach)
             frames, count = len(x), (2 * half + 1) ** 2
             middle = np.stack([nearest_pixel(x[:, b]), nearest_pixel(y[:, b])], axis=-1)
             places = np.stack(
@@ -233,7 +239,9 @@ def _profile(models: list[_Group], width: Floats, typical: float) -> tuple[profi
             for beta in profiles.BETAS:
                 first = start.copy()
                 first[:, 2:] *= 3.0 / beta
-                costs.append(np.median(profiles.fit(data, variance, good, first, profiles.plain(beta, typical))[1]))
+                candidate = profiles.plain(beta, typical)
+                few = slice(None, None, max(1, len(data) // _TRIED))
+                costs.append(np.median(profiles.fit(data[few], variance[few], good[few], first[few], candidate)[1]))
             beta = profiles.BETAS[int(np.argmin(costs))]
             start[:, 2:] *= 3.0 / beta
             shapes = shapes * (3.0 / beta)
@@ -244,8 +252,9 @@ def _profile(models: list[_Group], width: Floats, typical: float) -> tuple[profi
         beam = np.repeat([g.beam for g in models], [len(r) for r in rows])
         shapes = _shared(fitted[:, 2:], frame, beam, shapes)
         shape = np.concatenate([fitted[:, :2], shapes[frame, beam]], axis=1)
-        sound = np.isfinite(cost)
-        if sound.sum() >= 3:
+        sound = np.flatnonzero(np.isfinite(cost))
+        sound = sound[:: max(1, len(sound) // _TRIED)]
+        if len(sound) >= 3:
             profile = profiles.refine(
                 profiles.plain(profile.beta, typical), data[sound], variance[sound], good[sound], shape[sound]
             )

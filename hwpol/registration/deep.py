@@ -19,7 +19,13 @@ Floats = NDArray[np.float64]
 MOST = 3
 """Sharpest frames that are searched; where there are so many, a new star has to be seen in two of them."""
 
+_ALIKE = 1.25  # times the sharpest frame's width beyond which a frame could not show as much
 _SAME = 0.5  # fwhm within which two detections are one star
+# Part of the stars' width to which images are smoothed: at the full width a companion of a fifth of the light at
+# 2.5 fwhm is a ridge on the brighter star, and no peak of its own.
+_NARROW = 0.6
+_LEAST = 2.2  # pixels below which nothing is smoothed less
+_APART = 1.4  # fwhm from a known star within which what is new is its own image, split by its shape
 _SEARCH = 6.0  # pixels about the measured beam offset within which a partner is looked for
 
 
@@ -53,6 +59,7 @@ def deeper_stars(
     frames = usable[np.argsort(width[usable], kind="stable")][:MOST]
     if not len(frames):
         return stars
+    frames = frames[width[frames] < _ALIKE * width[frames[0]]]
     layout = Layout(tuple(hdu_of_beam), tuple(sections))
     offsets = np.array([m.offset for m in placement.beam_map])
     seen = [_seen(placement, images, layout, offsets, int(k), float(width[k])) for k in frames]
@@ -69,13 +76,14 @@ def deeper_stars(
     if near.any():
         flux *= np.median(merged.flux[near] / np.maximum(stars.flux[index[near]], 1e-9))
         flux[index[near]] = merged.flux[near]
-    fresh = merged.select(~near & (count >= need))
+    close, _ = _nearest(merged, stars, _APART * float(width[frames[0]]))
+    fresh = merged.select(~close & (count >= need))
     return _joined(replace(stars, flux=flux), fresh.select(np.argsort(-fresh.flux, kind="stable")))
 
 
 def _seen(placement: Placement, images: Images, layout: Layout, offsets: Floats, k: int, width: float) -> Stars:
     """Stars of frame k that have all partners, at their places in the first frame."""
-    lists = layout.detect(layout.load(images, k), width)
+    lists = layout.detect(layout.load(images, k), min(width, max(_NARROW * width, _LEAST)))
     match = beam_offsets(lists, offsets, radius=_SEARCH)
     stars = lists[0].select(match.first)
     angle = np.radians(placement.rotation[k])
