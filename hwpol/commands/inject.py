@@ -16,7 +16,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("night", help="night file (TOML)")
     parser.add_argument("--target", default="", metavar="NAME", help="this target only (default: of each filter the "
                         "science visit with most frames)")  # fmt: skip
-    parser.add_argument("--stars", type=int, default=8, metavar="N", help="artificial stars in each visit (default: 8)")
+    parser.add_argument("--stars", type=int, default=8, metavar="N", help="artificial stars in each visit (default: "
+                        "8); in a small field they reach each other's sky: take fewer and repeat")  # fmt: skip
     parser.add_argument("--repeats", type=int, default=1, metavar="M", help="realisations of each visit (default: 1)")
     parser.add_argument("--seed", type=int, default=0, help="seed of places, polarisation and noise (default: 0)")
     parser.add_argument("--output", metavar="FOLDER", help="folder of inject.ecsv and of kept frames, never among raw "

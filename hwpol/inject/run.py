@@ -94,7 +94,7 @@ def inject(
     curve of growth; their light goes through the calibration that the night gave (so that errors of the calibration
     itself are not tested), the plate's and analysers' angles, the target's transparency and gain, the flat and the
     detector, with photon noise of its own. They are placed by the registration of the night, so that its errors common
-    to the whole field are not tested.
+    to the whole field are not tested. Repeats share the sky noise of the frames where their places overlap.
 
     Parameters
     ----------
