@@ -3,7 +3,7 @@
 import pytest
 
 #: Nights; the science targets of each give two values apiece.
-NIGHTS = 18
+NIGHTS = 17
 TARGETS = 3
 
 
