@@ -97,8 +97,8 @@ def assemble(
                 "in the instrument frame"
             )
         words += [
-            f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {frame} {reason}"
-            for (_, frame), reason in _suspect_frames([visit], [solution]).items()
+            f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {visit.fluxes.frames[k]} {reason}"
+            for (_, k), reason in _suspect_frames([visit], [solution]).items()
         ]
         own, each = _rows(config, visit, solution, roles[visit.task_number], calibration if known else None)
         rows += own
@@ -263,12 +263,17 @@ def _frame_rows(
 ) -> list[dict[str, Any]]:
     lost = _lost_frames(visits) | _suspect_frames(visits, solutions)
     rows = []
+    counts: dict[int, int] = {}
     for row in frames.table:
         status, reason = str(row["status"]), str(row["reason"])
-        if status == "used" and int(row["visit"]) in failed:
-            status, reason = "set aside", failed[int(row["visit"])]
-        elif status == "used" and (int(row["visit"]), str(row["name"])) in lost:
-            status, reason = "set aside", lost[int(row["visit"]), str(row["name"])]
+        visit = int(row["visit"])
+        # A visit's frames stand in the same order here and in its fluxes.
+        place = visit, counts.get(visit, 0)
+        counts[visit] = place[1] + 1
+        if status == "used" and visit in failed:
+            status, reason = "set aside", failed[visit]
+        elif status == "used" and place in lost:
+            status, reason = "set aside", lost[place]
         rows.append(
             {name: row[name] for name in ("kind", "object", "filter", "exposure", "mjd", "wave_plate", "psi")}
             | {"visit": row["visit"], "cycle": row["cycle"], "status": status, "reason": reason}
@@ -277,8 +282,8 @@ def _frame_rows(
     return rows
 
 
-def _lost_frames(visits: Sequence[VisitResult]) -> dict[tuple[int, str], str]:
-    """Frames of which no source could be used, with the reason."""
+def _lost_frames(visits: Sequence[VisitResult]) -> dict[tuple[int, int], str]:
+    """Frames (visit, place in it) of which no source could be used, with the reason."""
     lost = {}
     for visit in visits:
         fluxes: Fluxes = visit.fluxes
@@ -286,18 +291,18 @@ def _lost_frames(visits: Sequence[VisitResult]) -> dict[tuple[int, str], str]:
         for k in np.flatnonzero(dead):
             bits = int(np.bitwise_or.reduce(fluxes.flags[:, k], axis=(0, 1)))
             why = ", ".join(name.replace("_", " ") for name in flag_names(bits)) or "not measured"
-            lost[visit.task_number, fluxes.frames[k]] = f"no source of its visit could be measured in it: {why}"
+            lost[visit.task_number, int(k)] = f"no source of its visit could be measured in it: {why}"
     return lost
 
 
-def _suspect_frames(visits: Sequence[VisitResult], solutions: Sequence[VisitSolution]) -> dict[tuple[int, str], str]:
-    """Frames that contradict their wave-plate angle, with the reason."""
+def _suspect_frames(visits: Sequence[VisitResult], solutions: Sequence[VisitSolution]) -> dict[tuple[int, int], str]:
+    """Frames (visit, place in it) that contradict their wave-plate angle, with the reason."""
     found = {}
     for visit, solution in zip(visits, solutions, strict=True):
         for suspect in solution.suspects:
             psi = visit.fluxes.wave_plate[suspect.frame]
             instead = f"it fits {suspect.position:g} deg" if np.isfinite(suspect.position) else "it fits no position"
-            found[visit.task_number, visit.fluxes.frames[suspect.frame]] = (
+            found[visit.task_number, suspect.frame] = (
                 f"does not fit its wave-plate angle {psi:g} deg (chance {suspect.chance:.1g}): {instead}"
             )
     return found

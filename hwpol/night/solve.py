@@ -123,6 +123,7 @@ def solve_visit(
         flags |= np.where(_null_probability(null, null_covariance) < DOUBT, int(Flag.NULL_FAILED), 0)
         flags |= np.where(_trend(cycles, solvable & ~set_aside) < DOUBT, int(Flag.CYCLE_VARIABLE), 0)
     dof = np.where(repeats, combined.dof, np.broadcast_to(stokes.dof, repeats.shape)).astype(int)
+    dof = np.where(np.isfinite(stokes.q), dof, -1)
     return VisitSolution(
         stokes=replace(stokes, covariance=covariance, flags=flags),
         observed=observed,

@@ -73,6 +73,7 @@ def write_table(table: Table, path: str | Path) -> Path:
     with whole(target) as temporary:
         if target.suffix == ".ecsv":
             table.write(temporary, format="ascii.ecsv", overwrite=True)
+            _keep_rows(temporary)
         elif target.suffix == ".fits":
             write_fits(fits.HDUList([fits.PrimaryHDU(), _to_hdu(table)]), temporary)
         elif target.suffix == ".vot":
@@ -80,6 +81,19 @@ def write_table(table: Table, path: str | Path) -> Path:
         else:
             raise InputError(f"{target}: suffix {target.suffix!r}, expected one of {', '.join(FORMATS.values())}")
     return target
+
+
+def _keep_rows(path: Path) -> None:
+    """Quote first cells that begin with "#": the reader would take their rows for comments."""
+    lines = path.read_text(encoding="utf-8").split("\n")
+    start = next((n for n, line in enumerate(lines) if not line.startswith("#")), len(lines)) + 1
+    if not any(line.startswith("#") for line in lines[start:]):
+        return
+    for n in range(start, len(lines)):
+        if lines[n].startswith("#"):
+            cell, blank, rest = lines[n].partition(" ")
+            lines[n] = f'"{cell}"{blank}{rest}'
+    path.write_text("\n".join(lines), encoding="utf-8")
 
 
 def _standard(table: Table) -> tuple[Table, dict[str, str]]:
