@@ -318,7 +318,8 @@ def _cycle_with_gain(fluxes: Fluxes, cycle: int, visit: Solution, circular: bool
     chosen = fluxes.take_frames(fluxes.cycle == cycle)
     gain = np.where(np.isfinite(visit.gain), visit.gain, 1.0)[:, None, :]
     relative = np.where(np.isfinite(visit.gain_err), visit.gain_err / gain[:, 0], np.nan)
-    error = np.nanmedian(relative, axis=0) if np.isfinite(relative).any() else np.full(gain.shape[-1], np.nan)
+    error, seen = np.full(gain.shape[-1], np.nan), np.isfinite(relative).any(axis=0)
+    error[seen] = np.nanmedian(relative[:, seen], axis=0)
     divided = replace(
         chosen,
         flux=chosen.flux / gain,
