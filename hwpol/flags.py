@@ -40,7 +40,7 @@ class Flag(IntFlag):
 FLAG_TEXT: dict[Flag, str] = {
     Flag.SATURATED: "a pixel in an aperture reached saturation; that frame was left out for this source",
     Flag.COSMIC_RAY: "a cosmic-ray hit lay in an aperture; that frame was left out for this source",
-    Flag.BAD_PIXELS: "bad pixels lay in an aperture",
+    Flag.BAD_PIXELS: "bad pixels lay in an aperture; where they spoilt its sum, that frame was left out",
     Flag.EDGE: "an aperture reached the edge of the detector or of the beam's strip; those frames were left out",
     Flag.NEIGHBOUR: "light of another star, or of another star's beam, reaches the aperture and can change q or u by "
     "more than the error",

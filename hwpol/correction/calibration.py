@@ -208,7 +208,8 @@ class Calibration:
         """Bring observed q, u from the instrument frame to the sky.
 
         The random covariance is carried along; what the calibration adds goes to `calibration_covariance`. A spread of
-        chi above 1 deg within a value is flagged (of eta - chi too, where a part turns with the telescope), and so are values outside the calibration's times or field.
+        chi above 1 deg within a value is flagged (of eta - chi too, where a part turns with the telescope), and so are
+        values outside the calibration's times or field.
         v is not calibrated; it changes its sign in a mirrored image.
 
         Raises

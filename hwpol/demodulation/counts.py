@@ -209,6 +209,20 @@ def solve_counts(flux: Array, variance: Array, modulation: Modulation, size: int
     )
 
 
+def explain_counts(
+    flux: Array, variance: Array, modulation: Modulation, z: Array, log_gain: Array, gains: Gains
+) -> tuple[Array, Array]:
+    """Brightness S_k (S, K) and residuals (S, K, B) of counts for a given z and given gains."""
+    valid = np.isfinite(flux) & np.isfinite(variance) & (variance > 0)
+    x, _ = modulation(z)
+    shape = np.exp(gains.fixed + _expand(log_gain, gains.index)) * (1 + x)
+    weight = np.where(valid, 1 / np.where(valid, variance, 1.0), 0.0)
+    norm = np.einsum("skb,skb->sk", weight, shape**2)
+    scale = np.einsum("skb,skb,skb->sk", weight, shape, np.where(valid, flux, 0.0)) / np.where(norm > 0, norm, 1.0)
+    residual = np.where(valid, (flux - scale[..., None] * shape) * np.sqrt(weight), np.nan)
+    return scale, residual
+
+
 def _first_gains(data: Array, valid: NDArray[np.bool_], gains: Gains, prior: Array, prior_weight: Array) -> Array:
     """Start values of ln g from the sums of counts where both the first beam and this one were counted."""
     start = np.where(prior_weight > 0, prior, 0.0)

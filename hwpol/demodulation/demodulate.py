@@ -8,20 +8,15 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hwpol.demodulation.counts import LEAST_INFORMATION, CountFit, Gains, information, solve_counts
-from hwpol.demodulation.modulation import modulation_rows, positions
+from hwpol.demodulation.counts import CountFit, solve_counts
+from hwpol.demodulation.faint import with_faint
+from hwpol.demodulation.models import as_beams, beams_model, determined, gains_of, model_of
+from hwpol.demodulation.modulation import modulation_rows
 from hwpol.demodulation.pairs import check_beams, solve_pairs
 from hwpol.errors import InputError
 from hwpol.flags import Flag
 from hwpol.fluxes import Fluxes
-from hwpol.stokes import (
-    Stokes,
-    instrument_from_sky,
-    mean_angle,
-    observed_from_instrument,
-    observed_slopes,
-    real_slopes,
-)
+from hwpol.stokes import Stokes, mean_angle
 
 Array = NDArray[np.float64]
 
@@ -111,19 +106,20 @@ def fit_counts(fluxes: Fluxes, *, gain: str = "visit", circular: bool = False, c
         lonely = whole.sum(axis=2, keepdims=True) < 2
         flux = np.where(lonely, np.nan, flux)
     size = 3 if circular else 2
-    gains = _gains(fluxes, gain)
+    gains = gains_of(fluxes, gain)
     rows = modulation_rows(fluxes.wave_plate, fluxes.analyser, fluxes.retardance)
-    if circular and not _determined(fluxes, rows, flux, gains, 3, calibration).any():
+    if circular and not determined(fluxes, rows, flux, gains, 3, calibration).any():
         size = 2
-    determined = _determined(fluxes, rows, flux, gains, size, calibration)
-    model = _sky_model(fluxes, rows, size, calibration)
+    settled = determined(fluxes, rows, flux, gains, size, calibration)
+    model = model_of(fluxes, rows, size, calibration)
     if beams == 1:
         # One beam: the frames of the visit stand in for the beams of one frame, of known relative brightness.
-        fit = solve_counts(_as_beams(flux), _as_beams(variance), lambda z: _as_beams_model(*model(z)), size, gains)
+        fit = solve_counts(as_beams(flux), as_beams(variance), lambda z: beams_model(*model(z)), size, gains)
     else:
         fit = solve_counts(flux, variance, model, size, gains)
-    z = np.where(determined[:, None], fit.z, np.nan)
-    covariance = np.where(determined[:, None, None], fit.covariance, np.nan)
+        fit = with_faint(replace(fluxes, flux=flux), fit, model, size, gains, gain, calibration)
+    z = np.where(settled[:, None], fit.z, np.nan)
+    covariance = np.where(settled[:, None, None], fit.covariance, np.nan)
     stokes = _label(
         fluxes, z, covariance, fit.chi2, fit.dof, "instrument" if calibration is None else "sky", circular=circular
     )
@@ -137,93 +133,6 @@ def fit_counts(fluxes: Fluxes, *, gain: str = "visit", circular: bool = False, c
         log_gain[:, 1:] = log_gain_var[:, 1:] = np.nan
     value = np.exp(log_gain) * (fluxes.throughput if gain == "fixed" else 1.0)
     return Solution(stokes, fit, value, value * np.sqrt(log_gain_var))
-
-
-def _as_beams(values: Array) -> Array:
-    return values[:, None, :, 0]
-
-
-def _as_beams_model(x: Array, slopes: Array) -> tuple[Array, Array]:
-    return x[:, None, :, 0], slopes[:, None, :, 0]
-
-
-def _gains(fluxes: Fluxes, gain: str) -> Gains:
-    _, frames, beams = fluxes.shape
-    if beams == 1:
-        with np.errstate(divide="ignore"):
-            relative = np.log(fluxes.exposure / np.nanmean(fluxes.exposure))
-        none = np.zeros((1, 0))
-        return Gains(np.zeros((1, frames), dtype=int), 0, relative[None, :], none, none)
-    known = np.log(fluxes.throughput / fluxes.throughput[0])
-    if gain == "fixed":
-        loose = np.isfinite(fluxes.throughput_err) & (fluxes.throughput_err > 0)
-        loose[0] = False
-        number = int(loose.sum())
-        index = np.broadcast_to(np.where(loose, np.cumsum(loose), 0), (frames, beams))
-        prior_variance = (fluxes.throughput_err / fluxes.throughput)[loose] ** 2
-        fixed = np.broadcast_to(known, (frames, beams))
-        return Gains(index, number, fixed, np.zeros((1, number)), prior_variance[None, :])
-    index = np.broadcast_to(np.arange(beams), (frames, beams))
-    number = beams - 1
-    if gain == "cycle":
-        cycle = np.unique(fluxes.cycle, return_inverse=True)[1]
-        number = (beams - 1) * (int(cycle.max(initial=0)) + 1)
-        index = np.where(index > 0, index + cycle[:, None] * (beams - 1), 0)
-    free = np.full((1, number), np.inf)
-    return Gains(index, number, np.zeros((frames, beams)), np.zeros((1, number)), free)
-
-
-def _sky_model(fluxes: Fluxes, rows: Array, size: int, calibration: Any) -> Any:
-    """Return the function z -> x, dx/dz: the rows alone, or through sky, instrument and its polarisation."""
-    coefficients = rows[..., :size]
-    sources = fluxes.shape[0]
-
-    def plain_model(z: Array) -> tuple[Array, Array]:
-        x = np.einsum("kbp,sp->skb", coefficients, z)
-        return x, np.broadcast_to(coefficients, (sources, *coefficients.shape))
-
-    if calibration is None:
-        return plain_model
-    chi, eta, sense = fluxes.position_angle, fluxes.parallactic, fluxes.sense
-    ip, amplitude = calibration.terms(fluxes.filter, fluxes.x, fluxes.y, chi, eta, sense, fluxes.mjd)
-    unit = instrument_from_sky(np.ones(chi.shape), chi, sense)
-
-    def sky_model(z: Array) -> tuple[Array, Array]:
-        inside = instrument_from_sky(z[:, :1] + 1j * z[:, 1:2], chi, sense)
-        observed = observed_from_instrument(inside, ip, amplitude)
-        a, b = observed_slopes(inside, ip, amplitude)
-        if sense > 0:
-            a, b = a * unit, b * np.conj(unit)
-        else:
-            a, b = b * np.conj(unit), a * unit
-        jacobian = real_slopes(a, b)
-        x = rows[..., 0] * observed.real[..., None] + rows[..., 1] * observed.imag[..., None]
-        slopes = np.einsum("kbi,skij->skbj", rows[..., :2], jacobian)
-        if size == 3:
-            x = x + rows[..., 2] * sense * z[:, 2, None, None]
-            last = np.broadcast_to(rows[..., 2:] * sense, (*slopes.shape[:-1], 1))
-            slopes = np.concatenate([slopes, last], axis=-1)
-        return x, slopes
-
-    return sky_model
-
-
-def _determined(
-    fluxes: Fluxes, rows: Array, flux: Array, gains: Gains, size: int, calibration: Any
-) -> NDArray[np.bool_]:
-    """Whether the positions (readings within the usual tolerance taken as one) determine z, per source."""
-    period = 180.0 if np.all(fluxes.retardance == 180.0) else 360.0
-    rounded = modulation_rows(positions(fluxes.wave_plate, period=period), fluxes.analyser, fluxes.retardance)
-    model = _sky_model(fluxes, rounded, size, calibration)
-    _, slopes = model(np.zeros((fluxes.shape[0], size)))
-    valid = np.isfinite(flux)
-    if fluxes.shape[2] == 1:
-        valid, slopes = _as_beams(valid), slopes[:, None, :, 0]
-        scale = max(fluxes.shape[1], 1)
-    else:
-        scale = 1
-    matrix = information(valid, np.asarray(slopes), gains) / scale
-    return np.linalg.eigvalsh(matrix)[:, 0] > LEAST_INFORMATION
 
 
 def _label(

@@ -53,6 +53,9 @@ def _null(fluxes: Fluxes, first: NDArray[np.bool_], gain: str, calibration: Any,
         return np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
     one = fit_counts(fluxes.take_frames(first), gain=gain, calibration=calibration, circular=circular).stokes
     other = fit_counts(fluxes.take_frames(~first), gain=gain, calibration=calibration, circular=circular).stokes
+    if circular and any(half.v is None or not np.isfinite(half.v).all() for half in (one, other)):
+        # Half the positions do not tell circular light from the rest; it would stand in the null.
+        return np.full((sources, 2), np.nan), np.full((sources, 2, 2), np.nan)
     difference = (one.z - other.z) / 2
     covariance = (one.random_covariance + other.random_covariance) / 4
     chi = one.position_angle

@@ -52,7 +52,8 @@ class Answer:
         failed = np.any(
             np.asarray(self.results["flags"]) & int(Flag.NULL_FAILED | Flag.PLATE_SUSPECT | Flag.UNDETERMINED)
         )
-        return not (aside or failed)
+        doubted = any(str(text) for text in self.standards["doubt"])
+        return not (aside or failed or doubted)
 
 
 def assemble(
@@ -106,6 +107,8 @@ def assemble(
         words += [f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {note}" for note in visit.notes]
     words += [f"visit {number} could not be measured: {reason}" for number, reason in sorted(failed.items())]
     standards = _standards(visits, solutions, roles, calibration)
+    words += [f"standard {row['name']} in {row['filter']}: {row['doubt']}" for row in standards if row.get("doubt")]
+    words += _lone_standards(calibration)
     meta = {
         "instrument": config.instrument.name,
         "calibration": _calibration_name(config, calibration),
@@ -222,6 +225,22 @@ def _standards(
             if role.entry is not None and (name, visit.filter, visit.task_number) not in told:
                 rows.append(_standard_row(name, visit, solution.stokes[s : s + 1], role))
     return rows
+
+
+def _lone_standards(calibration: Calibration | None) -> list[str]:
+    """Filters whose instrumental polarisation rests on one star, which then agrees with it by construction."""
+    if calibration is None:
+        return []
+    rows = calibration.standards_table()
+    words = []
+    for name in calibration.filters:
+        zero = {str(row["name"]) for row in rows if row["filter"] == name and row["role"] == "zero-polarised"}
+        if len(zero) == 1:
+            words.append(
+                f"filter {name!r}: one zero-polarised standard ({zero.pop()}) defines the instrumental polarisation, "
+                "so that its own q and u come out as zero and test nothing; observe two or more"
+            )
+    return words
 
 
 def _standard_row(name: str, visit: VisitResult, stokes: Stokes, role: Role) -> dict[str, Any]:

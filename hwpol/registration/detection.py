@@ -18,8 +18,8 @@ _SHARP = 0.6
 _ONE_PIXEL = 1.25
 # Share of one pixel in its 3 x 3: 0.41 for a star of 1.3 pixels centred on it, 1 for a hot pixel.
 _LONE = 0.55
-# Worth of a claim of twice the scale beside an equal one.
-_COARSER = 0.8
+# Worth of a claim of twice the scale beside an equal one; the next is taken where one yields no star at all.
+_COARSER = (1.0, 0.9, 0.8)
 _MOST_MEASURED = 3000
 
 
@@ -141,8 +141,6 @@ def _peaks(ratio: Floats, fwhm: float, threshold: float) -> tuple[NDArray[np.int
 
 def _field_width(flat: Pixels, bad: Bools) -> float | None:
     """Width of the stars (pixels): each source's best scale of 2.2, 4.4, ... pixels, refined by its moments."""
-    from scipy.spatial import cKDTree
-
     found: list[tuple[float, float, float, float]] = []
     level, n = flat, 1
     while min(level.data.shape) >= 5 and n <= 16:
@@ -156,10 +154,16 @@ def _field_width(flat: Pixels, bad: Bools) -> float | None:
         ]
         n *= 2
         level = binned(flat, n)
-    if not found:
-        return None
-    # A photon-limited star is as significant on any scale that holds it: the finer one is its own.
-    table = np.array(sorted(found, key=lambda claim: claim[0] * _COARSER ** np.log2(claim[3] / 2.2), reverse=True))
+    # A photon-limited star is as significant on any scale that holds it: a coarse one may win its claim by chance and
+    # then fail, where the finer one is its own.
+    widths = (_claimed_width(flat, found, coarser) for coarser in _COARSER) if found else iter(())
+    return next((width for width in widths if width is not None), None)
+
+
+def _claimed_width(flat: Pixels, found: list[tuple[float, float, float, float]], coarser: float) -> float | None:
+    from scipy.spatial import cKDTree
+
+    table = np.array(sorted(found, key=lambda claim: claim[0] * coarser ** np.log2(claim[3] / 2.2), reverse=True))
     tree = cKDTree(table[:, 1:3])
     free, taken = np.ones(len(table), bool), np.zeros(len(table), bool)
     for i in range(len(table)):

@@ -19,6 +19,8 @@ Floats = NDArray[np.float64]
 Images = Callable[..., Pixels]
 
 _TRACERS = 120
+# Share of the best beam's agreeing images that every beam must reach.
+_EACH_BEAM = 0.3
 _CHECKED = 40
 
 
@@ -214,7 +216,8 @@ class Follower:
         fading = np.concatenate(ratio)
         common = np.abs(fading - np.median(fading)) < np.log(3.0)
         common &= (fading > np.log(0.01)) & (fading < np.log(8.0))
-        a, c, w = a[common], c[common], w[common]
+        beam = np.repeat(np.arange(len(pixels)), [len(part) for part in first])
+        a, c, w, beam = a[common], c[common], w[common], beam[common]
         if len(a) < min(2, tried):
             return None
         tolerance = max(0.7, 0.2 * self.width)
@@ -222,11 +225,16 @@ class Follower:
         if not turns:
             best, _, _ = vote(np.zeros((1, 2)), c - a, tolerance=tolerance)
             near = np.hypot(*(c - a - best).T) <= tolerance
-            a, c, w = a[near], c[near], w[near]
+            a, c, w, beam = a[near], c[near], w[near], beam[near]
         if not len(a):
             return None
         refined, residual = fit_motion(a, c, w, self.pivot, rotate=turns)
-        agree = int((np.hypot(*residual.T) < np.maximum(0.5 * tolerance, 4.0 / np.sqrt(w))).sum())
+        fits = np.hypot(*residual.T) < np.maximum(0.5 * tolerance, 4.0 / np.sqrt(w))
+        agree = int(fits.sum())
+        # Where beams overlap, one beam's images can lie where another's should: every beam must bear the motion out.
+        each = np.bincount(beam[fits], minlength=len(pixels))
+        if each.min() < _EACH_BEAM * each.max():
+            return None
         # Reference stars may be blemishes; chance puts under one in a hundred images where the others say.
         needed = max(min(2, tried), min(int(np.ceil(0.3 * tried)), 6), int(0.12 * tried))
         return _compose(refined, motion) if agree >= needed else None

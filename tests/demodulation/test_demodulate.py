@@ -254,3 +254,36 @@ def test_many_sources_equal_one_by_one():
     for s in range(5):
         alone = demodulate(fluxes_of(flux[s], psi))
         assert abs(together.q[s] - alone.q[0]) < EXACT
+
+
+@pytest.mark.parametrize(("electrons", "cycles"), [(40, 2), (100, 2), (100, 4), (300, 4)])
+def test_faint_sources_on_a_bright_sky_are_solved_and_true(electrons, cycles):
+    """Signal to noise of 1 to 8 a frame: a number for every one of 2000, true errors, no bias."""
+    rng = np.random.default_rng(7)
+    psi = np.tile(SETS["4"], cycles)
+    mean = counts(psi, 0.1, -0.05, gain=0.9, electrons=electrons, factors=rng.uniform(0.9, 1.1, len(psi)))
+    noisy = rng.poisson(mean + 500, (2000, *mean.shape)) - 500.0
+    fluxes = fluxes_of(noisy, psi, variance=np.maximum(noisy + 500, 1), cycle=np.repeat(np.arange(cycles), 4))
+    stokes = demodulate(fluxes)
+    assert np.isfinite(stokes.q).all()
+    for estimate, error, truth in ((stokes.q, stokes.q_err, 0.1), (stokes.u, stokes.u_err, -0.05)):
+        pull = (estimate - truth) / error
+        # At signal to noise of 1 the brightness itself is uncertain and the pulls have tails: their middle is judged.
+        inner = np.sort(np.abs(pull))[int(0.6827 * len(pull))]
+        assert inner == pytest.approx(1, abs=0.06)
+        assert abs(np.median(pull)) < 0.1
+
+
+def test_faint_solve_joins_the_bright_one():
+    """At the limit of what counts as faint both roads agree within a tenth of the error."""
+    rng = np.random.default_rng(9)
+    psi = np.tile(SETS["4"], 4)
+    mean = counts(psi, 0.1, -0.05, electrons=56.0)
+    flux = rng.poisson(mean, (400, *mean.shape)).astype(float)
+    variance = np.maximum(flux, 1)
+    together = demodulate(fluxes_of(flux, psi, variance=variance))
+    signal = np.median(flux.sum(axis=2) / np.sqrt(variance.sum(axis=2)), axis=1)
+    assert (signal < 8).any()
+    assert (signal >= 8).any()
+    for part in (signal < 8, signal >= 8):
+        assert np.mean(together.q[part]) == pytest.approx(0.1, abs=4 * 0.045 / np.sqrt(part.sum()))
