@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -80,7 +81,9 @@ def photometer(
         registration=registration,
         hits=cosmic_rays,
     )
-    return reduce_visit(task).fluxes
+    result = reduce_visit(task)
+    # What is doubtful about a source as a whole (not found, neighbours, no plateau) stands in all its frames.
+    return replace(result.fluxes, flags=result.fluxes.flags | result.flags[:, None, None])
 
 
 def extent(value: Any, name: str = "radius") -> Extent:
