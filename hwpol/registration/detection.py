@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, fields
 
 import numpy as np
@@ -105,10 +106,11 @@ def detect(pixels: Pixels, *, fwhm: float | None = None, threshold: float = 5.0)
         np.where(bad, np.float32(0), np.maximum(pixels.variance, np.float32(0))),
         pixels.mask | np.where(bad, np.uint8(PixelMask.BAD), np.uint8(0)),
     )
-    width = fwhm if fwhm is not None else _field_width(flat, bad)
-    if width is None:
-        return no_stars()
-    stars = _find(flat, bad, width, threshold)
+    stars = no_stars()
+    for width in [fwhm] if fwhm is not None else _field_widths(flat):
+        stars = _find(flat, bad, width, threshold)
+        if len(stars):
+            break
     shift = np.array([pixels.x0, pixels.y0], dtype=np.float64)
     return Stars(stars.x + shift[0], stars.y + shift[1], *(getattr(stars, f.name) for f in fields(stars)[2:]))
 
@@ -139,8 +141,12 @@ def _peaks(ratio: Floats, fwhm: float, threshold: float) -> tuple[NDArray[np.int
     return rows[order], columns[order]
 
 
-def _field_width(flat: Pixels, bad: Bools) -> float | None:
-    """Width of the stars (pixels): each source's best scale of 2.2, 4.4, ... pixels, refined by its moments."""
+def _field_widths(flat: Pixels) -> Iterator[float]:
+    """Widths of the stars (pixels), likeliest first: each source's best scale of 2.2, 4.4, ... refined by its moments.
+
+    A photon-limited star is as significant on any scale that holds it: a coarse one may win its claim by chance and
+    then lead to no star, where the finer one is its own.
+    """
     found: list[tuple[float, float, float, float]] = []
     level, n = flat, 1
     while min(level.data.shape) >= 5 and n <= 16:
@@ -154,10 +160,10 @@ def _field_width(flat: Pixels, bad: Bools) -> float | None:
         ]
         n *= 2
         level = binned(flat, n)
-    # A photon-limited star is as significant on any scale that holds it: a coarse one may win its claim by chance and
-    # then fail, where the finer one is its own.
-    widths = (_claimed_width(flat, found, coarser) for coarser in _COARSER) if found else iter(())
-    return next((width for width in widths if width is not None), None)
+    for coarser in _COARSER if found else ():
+        width = _claimed_width(flat, found, coarser)
+        if width is not None:
+            yield width
 
 
 def _claimed_width(flat: Pixels, found: list[tuple[float, float, float, float]], coarser: float) -> float | None:
