@@ -158,8 +158,19 @@ FOREGROUND = Table(
         Key("u", _fraction, "Foreground U/I on the sky."),
         Key("q_err", _fraction_error, "Error of the foreground q."),
         Key("u_err", _fraction_error, "Error of the foreground u."),
+        Key(
+            "wavelength",
+            number(above=0, what="a number (micron)"),
+            "Wavelength of the q and u given: they are carried to each filter's by the Serkowski law. Without it they "
+            "serve every filter as they stand.",
+        ),
+        Key(
+            "reddening",
+            number(at_least=0, what="a number (magnitudes)"),
+            "E(B-V) in front of the targets: a note is made where the foreground exceeds 9 percent of it.",
+        ),
     ),
-    text="a table with method, q, u, q_err, u_err",
+    text="a table with method, q, u, q_err, u_err, ...",
     rule=_foreground_rule,
     build=into(objects.ForegroundConfig),
 )

@@ -73,13 +73,18 @@ class DemodulationConfig:
 
 @dataclass(frozen=True)
 class ForegroundConfig:
-    """`method` "off", "field" or "value"; q, u and errors are fractions on the sky, None unless "value"."""
+    """`method` "off", "field" or "value"; q, u and errors are fractions on the sky, None unless "value".
+
+    `wavelength` (micron) of the values given and `reddening` E(B-V) (mag) may be known.
+    """
 
     method: str = "off"
     q: float | None = None
     u: float | None = None
     q_err: float | None = None
     u_err: float | None = None
+    wavelength: float | None = None
+    reddening: float | None = None
 
 
 @dataclass(frozen=True)

@@ -19,9 +19,9 @@ LEAST_STARS = 3
 
 
 def find_foreground(
-    config: ForegroundConfig, solution: VisitSolution, targets: int, calibration: Any
+    config: ForegroundConfig, solution: VisitSolution, targets: int, calibration: Any, wavelength: float | None = None
 ) -> tuple[Foreground | None, str]:
-    """The foreground of one visit, and why there is none (empty where none was asked for).
+    """The foreground of one visit, and a note: why there is none, or what is odd about it (empty for neither).
 
     Parameters
     ----------
@@ -29,6 +29,8 @@ def find_foreground(
     solution : VisitSolution
         Sources from `targets` on are field stars.
     calibration : Calibration or None
+    wavelength : float, optional
+        Of the visit's filter, micron.
     """
     if config.method == "off":
         return None, ""
@@ -36,7 +38,13 @@ def find_foreground(
         return None, "no foreground was removed: its q and u are on the sky, these results are not"
     if config.method == "value":
         values = [0.0 if v is None else v for v in (config.q, config.u, config.q_err, config.u_err)]
-        return Foreground.of_value(*values), ""
+        own = float("nan") if config.wavelength is None else config.wavelength
+        given = Foreground.of_value(*values, wavelength=own, reddening=config.reddening)
+        if config.wavelength is None:
+            return given, given.note
+        if wavelength is None:
+            return given, "the foreground was not carried to this filter: [filters] does not tell its wavelength"
+        return given.at(wavelength), given.note
     stars = solution.stokes[targets:]
     good = np.isfinite(stars.q) & np.isfinite(stars.u)
     if good.sum() < LEAST_STARS:
@@ -45,7 +53,8 @@ def find_foreground(
             'photometry.sources = "field" measures them'
         )
     try:
-        return Foreground.of_field([stars[good]], calibration), ""
+        found = Foreground.of_field([stars[good]], calibration, reddening=config.reddening)
+        return found, found.note
     except HwpolError as problem:
         return None, f"no foreground was removed: {problem}"
 

@@ -12,6 +12,8 @@ from astropy.table import Table
 from numpy.typing import NDArray
 
 from hwpol.correction import Calibration
+from hwpol.correction.catalogue import Catalogue
+from hwpol.errors import HwpolError
 from hwpol.flags import Flag, flag_names
 from hwpol.fluxes import Fluxes
 from hwpol.frames import FrameSet
@@ -83,13 +85,17 @@ def assemble(
         known = visit.filter in usable
         solution = with_drift(with_excess(measured, excess), visit.drift, usable.get(visit.filter))
         foreground, why = find_foreground(
-            config.correction.foreground, solution, len(visit.names), calibration if known else None
+            config.correction.foreground,
+            solution,
+            len(visit.names),
+            calibration if known else None,
+            _wavelength(config, visit.filter),
         )
         if foreground is not None:
             listed = roles[visit.task_number]
             science = np.asarray([s < len(listed) and listed[s].role == "science" for s in range(solution.flags.size)])
             solution = remove_foreground(solution, foreground, science, calibration)
-        elif why:
+        if why:
             words.append(f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {why}")
         solutions.append(solution)
         if calibration is not None and not known:
@@ -129,6 +135,18 @@ def assemble(
         solutions=tuple(solutions),
         seconds=seconds,
     )
+
+
+def _wavelength(config: NightConfig, name: str) -> float | None:
+    """Wavelength (micron) of a filter, from the instrument file or its band; None where neither tells."""
+    known = config.instrument.filters.get(name)
+    if known is not None and known.wavelength is not None:
+        return known.wavelength
+    try:
+        band = known.band if known is not None and known.band else name
+        return Catalogue.read(config.correction.catalogues).wavelength_of(band)
+    except HwpolError:
+        return None
 
 
 def _calibration_name(config: NightConfig, calibration: Calibration | None) -> str:

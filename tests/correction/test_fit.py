@@ -271,9 +271,7 @@ def test_alt_az_night_with_large_telescope_polarisation(bench):
     rng = np.random.default_rng(8)
     b = bench(ip=0.001 + 0.002j, tel=0.02 - 0.015j, rng=rng)
     angles = np.linspace(-80, 75, 10)
-    zeros = [
-        b.zero(f"z{k}", true=3e-4 * complex(*rng.normal(size=2)), chi=15.0, eta=e) for k, e in enumerate(angles)
-    ]
+    zeros = [b.zero(f"z{k}", true=3e-4 * complex(*rng.normal(size=2)), chi=15.0, eta=e) for k, e in enumerate(angles)]
     polarised = [b.pol(f"p{k}", 0.06, 50.0 * k, chi=15.0, eta=e) for k, e in enumerate((-40.0, 0.0, 50.0))]
     calibration = Calibration.fit([*zeros, *polarised], frame="both")
     eta = np.linspace(-90, 90, 37)

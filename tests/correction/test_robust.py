@@ -15,9 +15,7 @@ ONE_SIGMA = 0.6827
 RUNS = pytest.mark.parametrize("runs", [60, pytest.param(200, marks=pytest.mark.slow)])
 
 
-def standards_of(
-    bench, seed, *, zeros=5, scatter=5e-4, bad_zero=0.0, polarised=3, bad_angle=0.0, told=True
-):
+def standards_of(bench, seed, *, zeros=5, scatter=5e-4, bad_zero=0.0, polarised=3, bad_angle=0.0, told=True):
     """Return the standards of a night: the first zero star off by `bad_zero`, the first angle by `bad_angle` (deg)."""
     rng = np.random.default_rng(seed)
     b = bench(rng=rng)
@@ -99,9 +97,7 @@ def test_one_bad_angle_standard(bench):
     """Wrong by 0.8 deg beside three good ones it moves the zero by less than 0.1 deg."""
     nights_ = [standards_of(bench, seed, scatter=1e-4, polarised=4, bad_angle=0.8) for seed in range(50)]
     models = [Calibration.fit(night).filters["V"] for night in nights_]
-    without = [
-        Calibration.fit([s for s in night if s.name != "p0"]).filters["V"] for night in nights_
-    ]
+    without = [Calibration.fit([s for s in night if s.name != "p0"]).filters["V"] for night in nights_]
     moved = angle_errors(models)[0] - angle_errors(without)[0]
     # Taken as it is, it moves the zero by 0.8 / 4 = 0.2 deg.
     assert np.mean(np.abs(moved)) < 0.1

@@ -13,7 +13,7 @@ from hwpol.correction.fitting.one_model import AMPLITUDE_LIMIT, IP_LIMIT, Fit, f
 from hwpol.correction.model import AMPLITUDE, Array, Setting, basis, term_names
 
 #: Highest order tried for "best", and stars wanted for each term of a component.
-HIGHEST_ORDER, STARS_PER_TERM = 4, 3
+HIGHEST_ORDER, STARS_PER_TERM = 4, 2
 #: Parts into which the stars are split for cross-validation.
 FOLDS = 10
 #: Times (d) between which a drift may be sought: at least half an hour, within one night.
