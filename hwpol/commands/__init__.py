@@ -71,8 +71,25 @@ def _parser() -> argparse.ArgumentParser:
         usage="hwpol COMMAND ...",
     )
     parser.add_argument("--version", action=_Version, nargs=0, help="print the version")
+    parser.add_argument(
+        "--completion", action=_Completion, metavar="SHELL", help="print a completion script for bash, zsh or fish"
+    )
     parser.add_argument("verb", nargs="?", choices=VERBS, metavar="COMMAND", help=argparse.SUPPRESS)
     return parser
+
+
+class _Completion(argparse.Action):
+    """Prints a completion script; a shell that is not known is an error of the command line."""
+
+    def __call__(self, parser: argparse.ArgumentParser, _: object, shell: object, *__: object) -> None:
+        from hwpol.commands.completion import completion
+        from hwpol.errors import ConfigError
+
+        try:
+            print(completion(str(shell)), end="")
+        except ConfigError as problem:
+            parser.error(str(problem))
+        parser.exit()
 
 
 class _Version(argparse.Action):
