@@ -168,11 +168,22 @@ INJECT: tuple[Column, ...] = _columns(
     ("flags", "integer", "", "meta.code", "bits named in the table's metadata"),
 )
 
+CHECKS: tuple[Column, ...] = _columns(
+    ("check", "text", "", "meta.id;meta.main", "what was tested: repeats, halves, half turn, seeing, airmass"),
+    ("filter", "text", "", "meta.id;instr.filter", "filter as in the header"),
+    ("visit", "integer", "", "meta.number", "visit, from 1; -1 for all of the filter"),
+    ("chi2", "number", "", "stat.fit.chi2", "chi square of the test"),
+    ("dof", "integer", "", "stat.fit.dof", "degrees of freedom of chi2"),
+    ("chance", "number", "", "stat.probability", "probability that noise alone gives so large a chi2"),
+    ("passed", "truth", "", "meta.code", "the chance is above the night's limit"),
+)
+
 TABLES: dict[str, tuple[Column, ...]] = {
     "results": RESULTS,
     "cycles": CYCLES,
     "frames": FRAMES,
     "standards": STANDARDS,
+    "checks": CHECKS,
     "inject": INJECT,
 }
 

@@ -221,6 +221,21 @@ class Calibrator:
         result = Pixels(data, variance, mask, raw.box.x0, raw.box.y0)
         return result if wanted is None else result.cut(wanted)
 
+    def flat_noise(
+        self, file: str | Path, beam: int, *, filter: str, exposure: float, gain: float | None = None,
+        psi: float | None = None,
+    ) -> float:  # fmt: skip
+        """Relative variance of the flat's pixels (median over the array); 0 without a flat.
+
+        It is no part of `Pixels.variance`: a pixel's flat is wrong by the same factor in every frame, which cancels
+        between frames while the image stands still.
+        """
+        plan = self._plan(file, beam, filter, exposure, gain, np.nan if psi is None else psi)
+        if plan.flat_variance is None:
+            return 0.0
+        value = float(np.nanmedian(plan.flat_variance))
+        return value if np.isfinite(value) else 0.0
+
     @property
     def _recipes(self) -> Recipes:
         if "recipes" not in self._memory:
@@ -267,9 +282,8 @@ class Calibrator:
         readout = readout_of(self.instrument, beam)
         overscan = overscan_level(file, readout)
         cut = _cut(raw.box)
-        bias, dark, inverse, flat_variance, masters = (
-            None if array is None else array[cut]
-            for array in (plan.bias, plan.dark, plan.inverse_flat, plan.flat_variance, plan.masters)
+        bias, dark, inverse, masters = (
+            None if array is None else array[cut] for array in (plan.bias, plan.dark, plan.inverse_flat, plan.masters)
         )
         zero, floor = 0.0, plan.floor
         if not plan.pedestal:
@@ -277,7 +291,6 @@ class Calibrator:
             zero, floor = median * plan.gain, (noise * plan.gain) ** 2
         level = None if overscan is None else np.broadcast_to(overscan.over(raw.box), raw.data.shape)
         data, variance = raw.data, np.empty_like(raw.data)
-        spare = np.empty((BLOCK_ROWS, data.shape[1]), np.float32)
         for y in range(0, len(data), BLOCK_ROWS):
             rows = slice(y, y + BLOCK_ROWS)
             block, noise_block = data[rows], variance[rows]
@@ -291,13 +304,11 @@ class Calibrator:
                 block -= dark[rows]
             if plan.gain != 1.0:
                 block *= np.float32(plan.gain)
-            if inverse is not None and flat_variance is not None:
-                # Photons / flat**2 + relative variance of the flat x electrons**2, in the fewest passes.
+            if inverse is not None:
+                # Photons / flat**2; the flat's own error is the same in every frame and told by `flat_noise`.
                 block *= inverse[rows]
                 np.maximum(block, np.float32(0.0), out=noise_block)
-                factor = np.multiply(noise_block, flat_variance[rows], out=spare[: len(block)])
-                factor += inverse[rows]
-                noise_block *= factor
+                noise_block *= inverse[rows]
             else:
                 np.subtract(block, np.float32(zero), out=noise_block)
                 np.maximum(noise_block, np.float32(0.0), out=noise_block)

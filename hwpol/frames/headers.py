@@ -22,6 +22,8 @@ from hwpol.instrument.description import Instrument, Keyword
 from hwpol.instrument.names import normal_name
 
 T = TypeVar("T")
+# Bytes of a pixel for every BITPIX of the FITS standard.
+_BITPIX = {8: 1, 16: 2, 32: 4, 64: 8, -32: 4, -64: 8}
 _BLOCK = 2880
 _CARD = 80
 _GZIP, _BZIP2 = b"\x1f\x8b", b"BZh"
@@ -145,7 +147,7 @@ def _data_bytes(header: fits.Header) -> int:
         sides = _sides(header, "NAXIS")
         if not sides:
             return 0
-        bits = abs(int(header["BITPIX"])) // 8
+        bits = _BITPIX[int(header["BITPIX"])]
         return bits * int(header.get("GCOUNT", 1)) * (int(header.get("PCOUNT", 0)) + math.prod(sides))
     except (KeyError, ValueError, TypeError, fits.VerifyError):
         raise FileProblem("not a FITS file: BITPIX and NAXIS make no sense") from None

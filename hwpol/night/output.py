@@ -24,7 +24,7 @@ def write_products(config: NightConfig, answer: Answer) -> list[Path]:
     """Write tables, visits, calibration and provenance into the output folder; return what was written."""
     folder = config.output
     written = []
-    for name in ("results", "cycles", "frames", "standards"):
+    for name in ("results", "cycles", "frames", "standards", "checks"):
         for form in dict.fromkeys(("ecsv", *config.products.formats)):
             written.append(write_table(getattr(answer, name), folder / f"{name}{FORMATS[form]}"))
     if answer.calibration is not None:

@@ -20,6 +20,7 @@ from hwpol.frames import FrameSet
 from hwpol.night.config_objects import NightConfig
 from hwpol.night.excess import night_excess, with_excess
 from hwpol.night.foreground import find_foreground, remove_foreground
+from hwpol.night.health import failed_checks, health_checks
 from hwpol.night.roles import Role
 from hwpol.night.rows import cycle_rows, result_rows
 from hwpol.night.solve import VisitSolution, solve_visit
@@ -41,6 +42,7 @@ class Answer:
     cycles: Table
     frames: Table
     standards: Table
+    checks: Table
     calibration: Calibration | None
     notes: tuple[str, ...]
     visits: tuple[VisitResult, ...]
@@ -115,6 +117,8 @@ def assemble(
     standards = _standards(visits, solutions, roles, calibration)
     words += [f"standard {row['name']} in {row['filter']}: {row['doubt']}" for row in standards if row.get("doubt")]
     words += _lone_standards(calibration)
+    checks = health_checks(visits, solutions)
+    words += failed_checks(checks)
     meta = {
         "instrument": config.instrument.name,
         "calibration": _calibration_name(config, calibration),
@@ -129,6 +133,7 @@ def assemble(
             _frame_rows(config, frames, visits, solutions, failed), "frames", {"instrument": config.instrument.name}
         ),
         standards=make_table(standards, "standards", meta),
+        checks=make_table(checks, "checks", {"instrument": config.instrument.name}),
         calibration=calibration,
         notes=tuple(dict.fromkeys(words)),
         visits=tuple(visits),

@@ -13,7 +13,7 @@ from hwpol.night.visit import VisitResult, VisitTask
 from hwpol.products import whole
 
 #: Raised when a visit is reduced differently, so that stored ones are not taken for new ones.
-RECIPE = 3
+RECIPE = 4
 
 
 def fingerprint(task: VisitTask) -> str:

@@ -35,6 +35,8 @@ from hwpol.registration import Placement, deeper_stars, register
 
 Array = NDArray[np.float64]
 
+#: Full width at half maximum of a Gaussian, in standard deviations.
+FWHM_PER_SIGMA = 2.3548
 #: Full width taken where no star tells it, pixels.
 UNKNOWN_FWHM = 4.0
 
@@ -126,6 +128,7 @@ def reduce_visit(task: VisitTask) -> VisitResult:
     placement = place(task, images, hints, sections)
     fwhm = float(np.nanmedian(placement.fwhm)) if np.isfinite(placement.fwhm).any() else UNKNOWN_FWHM
     notes = list(placement.notes)
+    leak = _flat_leak(task, placement, fwhm)
 
     x, y, flags = find_targets(task.targets, placement, hints, instrument.detector.pixel_scale, notes)
     px, py = placement.positions(x, y)
@@ -153,7 +156,7 @@ def reduce_visit(task: VisitTask) -> VisitResult:
     radii = multiples * float(np.median(seeing))
     foreign = np.stack([foreign_error(placement, images, x, y, fwhm, radius) for radius in radii])
     choice = choose_radius(
-        [_fluxes(task, measured, r, x[:1], y[:1], slice(0, 1)) for r in range(len(radii))],
+        [_fluxes(task, measured, r, x[:1], y[:1], slice(0, 1), leak) for r in range(len(radii))],
         multiples,
         REMAINS * foreign[:, 0],
         method=task.method,
@@ -162,14 +165,14 @@ def reduce_visit(task: VisitTask) -> VisitResult:
     index = choice.index if best else int(np.argmin(np.abs(multiples - photometry.radius.pixels(fwhm) / fwhm)))
     if best and not choice.plateau:
         flags[0] |= int(Flag.NO_PLATEAU)
-    fluxes = _fluxes(task, measured, index, x, y, slice(None))
+    fluxes = _fluxes(task, measured, index, x, y, slice(None), leak)
 
     if photometry.sources == "field":
         more_x, more_y = field_sources(placement, x, y, fwhm)
         if len(more_x):
             fx, fy = placement.positions(more_x, more_y)
             field = measured_at(fx, fy, multiples[index : index + 1], seeing)
-            fluxes = _join(fluxes, _fluxes(task, field, 0, more_x, more_y, slice(None)))
+            fluxes = _join(fluxes, _fluxes(task, field, 0, more_x, more_y, slice(None), leak))
             flags = np.append(flags, np.zeros(len(more_x), dtype=int))
     alien = foreign_error(placement, images, fluxes.x, fluxes.y, fwhm, float(radii[index]))
     flags |= neighbour_flags(fluxes, alien)
@@ -265,13 +268,42 @@ def _section(frames: FrameSet, beam: int) -> Section | None:
     return instrument.beams[beam].section or instrument.beams[beam].trim or instrument.detector.trim
 
 
-def _fluxes(task: VisitTask, measured: Measurement, radius: int, x: Array, y: Array, part: slice) -> Fluxes:
+def _flat_leak(task: VisitTask, placement: Placement, fwhm: float) -> Array:
+    """Variance of a flux, relative to its square, from errors of the flat that motion brings in; shape (K, B).
+
+    Over a Gaussian image the flat's errors average to  variance / (4 pi s^2),  s = fwhm / 2.355. What two images at a
+    distance d have of it in common is exp(-d^2 / 4 s^2); only the rest changes from frame to frame.
+    """
+    row = task.frames.table[0]
+    gain = float(row["gain"])
+    flat = [
+        task.calibrator.flat_noise(
+            row["file"],
+            b,
+            filter=str(row["filter"]),
+            exposure=float(row["exposure"]),
+            gain=gain if np.isfinite(gain) else None,
+            psi=float(row["psi"]),
+        )
+        for b in range(len(task.frames.instrument.beams))
+    ]
+    size = (fwhm / FWHM_PER_SIGMA) ** 2
+    moved = np.nan_to_num(placement.shift - np.nanmedian(placement.shift, axis=0))
+    changed = 1 - np.exp(-np.sum(moved**2, axis=1) / (4 * size))
+    return np.asarray(changed[:, None] * np.asarray(flat)[None, :] / (4 * np.pi * size))
+
+
+def _fluxes(
+    task: VisitTask, measured: Measurement, radius: int, x: Array, y: Array, part: slice, leak: Array
+) -> Fluxes:
     frames, instrument = task.frames, task.frames.instrument
     column = frames.column
     filter_name = str(frames.table["filter"][0])
     plate = instrument.wave_plate
     # A tiny floor: a variance of zero would be refused, and no detector has one.
-    variance = np.maximum(measured.variance[radius][part], 1e-6)
+    variance = np.maximum(
+        measured.variance[radius][part] + leak * np.nan_to_num(measured.flux[radius][part]) ** 2, 1e-6
+    )
     return Fluxes.from_arrays(
         measured.flux[radius][part],
         np.where(np.isfinite(measured.flux[radius][part]), variance, np.nan),

@@ -270,9 +270,10 @@ def _ra_unit(survey: Survey, key: str, science: list[int]) -> tuple[str, str, st
     if "CRVAL1" in survey.cards:
         centre = survey.numbers("CRVAL1", science)
         for factor, unit in ((1.0, ""), (15.0, "hourangle")):
-            if np.nanmedian(np.abs((numbers * factor - centre + 180) % 360 - 180)) < 1.0:
+            apart = np.abs((numbers * factor - centre + 180) % 360 - 180)
+            if np.isfinite(apart).any() and np.nanmedian(apart) < 1.0:
                 return f"a number in {unit or 'degrees'}, as it agrees with CRVAL1", unit, RECOGNISED
-    if np.nanmax(numbers) > 24:
+    if np.isfinite(numbers).any() and np.nanmax(numbers) > 24:
         return "a number above 24, so degrees", "", RECOGNISED
     return 'a number below 24 everywhere: taken as degrees; add unit = "hourangle" if it counts hours', "", GUESSED
 
