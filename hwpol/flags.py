@@ -61,7 +61,8 @@ FLAG_TEXT: dict[Flag, str] = {
     Flag.NOT_FOUND: "the source was not seen at its place in some frames; its aperture was placed by the field",
     Flag.NO_PLATEAU: "no plateau of q and u against radius was found",
     Flag.LOW_SIGNAL: "p is below three times its error: use the upper limit",
-    Flag.NOISE_DOUBTFUL: "the noise model lacks a piece (bias, gain or read noise unknown)",
+    Flag.NOISE_DOUBTFUL: "the noise model lacks a piece (bias, gain or read noise unknown), or the sky scatters "
+    "otherwise than it says: check gain and read noise",
     Flag.FROM_MEMORY: "the calibration rests on catalogue values recalled from memory: check their source",
     Flag.FOREGROUND_DOMINATES: "the foreground removed is more than three times the error that remains",
     Flag.CYCLE_VARIABLE: "q and u changed from the first half of the cycles to the second",

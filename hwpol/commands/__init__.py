@@ -66,7 +66,8 @@ def _parser() -> argparse.ArgumentParser:
         prog="hwpol",
         description="Imaging polarimetry behind a rotating half-wave plate: raw frames to calibrated results.\n\n"
         f"commands:\n{listing}\n\n`hwpol COMMAND --help` tells more of each.",
-        epilog="example: hwpol reduce night.toml",
+        epilog="exit status: 0 done; 1 done, but something was set aside or a check failed; 2 could not run\n"
+        "example: hwpol reduce night.toml",
         formatter_class=argparse.RawDescriptionHelpFormatter,
         usage="hwpol COMMAND ...",
     )

@@ -67,6 +67,10 @@ def run(options: argparse.Namespace) -> int:
     rms = float(np.sqrt(np.mean(np.square(pulls))))
     worst = float(np.max(np.abs(pulls)))
     print(f"\n{len(pulls)} values: rms of (measured - true)/error {rms:.2f}, largest {worst:.1f}.")
+    fitted = sum(row["role"] != "science" for row in answer.results)
+    print(
+        f"({fitted} of the {len(rows)} rows are the standards the calibration is fitted to: theirs are small for it.)"
+    )
     print(f"The night is in {Path(options.folder)}, its results in {night.config.output}.")
     if (night.config.output / "report.html").is_file():
         print(f"Open {night.config.output / 'report.html'} to see the night.")

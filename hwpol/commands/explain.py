@@ -30,6 +30,8 @@ def explain(name: str) -> list[str]:
         When nothing has that name; names the nearest.
     """
     wanted = name.strip().casefold()
+    if " " in wanted:
+        wanted = wanted.replace(" ", "_")
     found: list[str] = []
     known: dict[str, list[str]] = {}
     for label, text in _everything():

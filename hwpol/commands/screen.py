@@ -138,7 +138,7 @@ def calibration_lines(calibration: Any) -> list[str]:
             parts.append(f"efficiency {model.efficiency:.4f} ± {model.efficiency_err:.4f}")
         else:
             parts.append(f"efficiency taken as {model.efficiency:.4f}")
-        lines.append(f"{name}: " + "; ".join(parts))
+        lines.append(f"{name or 'no filter'}: " + "; ".join(parts))
     return lines
 
 

@@ -138,7 +138,8 @@ def _quantity(*extra: Key, several: int = 1) -> Kind:
         names.append(ListOf(names[0], what, at_least=1, at_most=several))
     pattern = Key("pattern", _pattern, "Regular expression whose one group is the value, for values hidden in text.")
     keyword = Key("keyword", Either(tuple(names)), "FITS keyword that holds the quantity.", required=True)
-    table = Table((keyword, pattern, *extra), text="a table {keyword = ...}", rule=_keyword_rule)
+    inside = ", ".join(f"{key.name} = ..." for key in (keyword, pattern, *extra))
+    table = Table((keyword, pattern, *extra), text=f"a table {{{inside}}}", rule=_keyword_rule)
     return Then(Either((*names, table)), _keyword)
 
 

@@ -90,7 +90,33 @@ def find_calibration(
         )
     except HwpolError as problem:
         return None, [*notes, f"the standards do not give a calibration: {problem}"]
-    return calibration, notes
+    hint = _sense_hint(calibration, usable, frame)
+    return calibration, [*notes, hint] if hint else notes
+
+
+def _sense_hint(calibration: Calibration, standards: list[Standard], frame: str) -> str:
+    """Words where the standards contradict each other and would agree if angles grew the other way; else empty."""
+    chi2 = sum(model.chi2 for model in calibration.filters.values() if np.isfinite(model.chi2))
+    dof = sum(model.dof for model in calibration.filters.values())
+    doubted = [row for row in calibration.standards_table() if row.get("doubt")]
+    if len(doubted) < 2 or any(not isinstance(standard.measured, Stokes) for standard in standards):
+        return ""
+    mirrored = [
+        replace(standard, measured=replace(standard.measured, u=-standard.measured.u)) for standard in standards
+    ]
+    try:
+        other = Calibration.fit(mirrored, frame=frame)
+    except HwpolError:
+        return ""
+    if any(row.get("doubt") for row in other.standards_table()):
+        return (
+            f"the standards contradict each other (chi2 {chi2:.0f} for {dof} degrees of freedom; {len(doubted)} are "
+            "doubted): look at [wave_plate] values, zero and scale, at the beams' analysers and at the catalogues"
+        )
+    return (
+        "the standards contradict each other, and would agree if angles grew the other way: check wave_plate.sense "
+        "and orientation.sense (one of them has the wrong sign)"
+    )
 
 
 def observed_value(item: Measured, demodulation: DemodulationConfig, frame: str) -> Stokes | Fluxes:

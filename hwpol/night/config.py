@@ -155,6 +155,15 @@ def frame_paths(config: NightConfig) -> list[Path]:
             empty.append(pattern)
     source = str(config.path or "")
     if not found:
+        hidden = [
+            path for pattern in config.frames for path in config.folder.glob(pattern) if config.output in path.parents
+        ]
+        if hidden:
+            raise ConfigError(
+                f'output = "{config.output.name}": holds the raw frames themselves ({hidden[0].name}, ...); '
+                "give a folder of its own",
+                source,
+            )
         raise ConfigError([f'frames = "{pattern}": matches no file in {config.folder}' for pattern in empty], source)
     for pattern in empty:
         warnings.warn(f'frames = "{pattern}": matches no file in {config.folder}', HwpolWarning, stacklevel=2)

@@ -31,6 +31,10 @@ from hwpol.stokes import Stokes, angle_difference, carry, real_slopes, sky_slope
 Array = NDArray[np.float64]
 
 
+#: How a note on a guessed place begins.
+GUESS = "place guessed from the brightest source"
+
+
 @dataclass(frozen=True)
 class Answer:
     """What a night gave: its tables, the calibration, and what is to be said of it.
@@ -72,6 +76,7 @@ def assemble(
 ) -> Answer:
     """Solve every visit with the calibration and make the tables."""
     words = [*notes]
+    guessed: list[str] = []
     rows: list[dict[str, Any]] = []
     cycles: list[dict[str, Any]] = []
     solutions = []
@@ -112,7 +117,16 @@ def assemble(
         own, each = _rows(config, visit, solution, roles[visit.task_number], calibration if known else None)
         rows += own
         cycles += each
-        words += [f"visit {visit.task_number} ({visit.names[0]}, {visit.filter}): {note}" for note in visit.notes]
+        place = f"visit {visit.task_number} ({visit.names[0]}, {visit.filter or 'no filter'})"
+        words += [f"{place}: {note}" for note in visit.notes if GUESS not in note]
+        if any(GUESS in note for note in visit.notes):
+            guessed.append(f"{visit.names[0]} in {visit.filter or 'no filter'}")
+    if guessed:
+        words.append(
+            f"{GUESS} that has its partner in every beam for {len(guessed)} visits ({', '.join(guessed[:4])}"
+            f"{', ...' if len(guessed) > 4 else ''}): look at the pictures in the report; "
+            "[[target]] xy = [x, y] fixes it"
+        )
     words += [f"visit {number} could not be measured: {reason}" for number, reason in sorted(failed.items())]
     standards = _standards(visits, solutions, roles, calibration)
     words += [f"standard {row['name']} in {row['filter']}: {row['doubt']}" for row in standards if row.get("doubt")]

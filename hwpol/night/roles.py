@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from hwpol.correction.catalogue import Catalogue, Entry
+from hwpol.correction.catalogue.bands import band_name
 from hwpol.errors import HwpolError
 from hwpol.frames import FrameSet
 from hwpol.instrument.description import Instrument
@@ -66,4 +67,19 @@ def role_of(target: TargetConfig, visit: FrameSet, catalogue: Catalogue, instrum
         return Role(
             target.role, None, f"{target.name}: role {target.role!r}, but the catalogue lists it as {entry.role}"
         )
-    return Role(entry.role, entry)
+    return Role(entry.role, entry, _doubt(target.name, filter_name, entry, known is not None))
+
+
+def _doubt(name: str, filter_name: str, entry: Entry, described: bool) -> str:
+    """What is odd about the band of a catalogue value; empty for nothing."""
+    if not described and (not filter_name or band_name(filter_name) is None):
+        return (
+            f"{name}: its filter {filter_name or '(none)'!r} names no band: the catalogue's value for "
+            f"{entry.band or 'its first band'} is used; describe it in [filters] of the instrument file"
+        )
+    if entry.method in {"serkowski", "fitted", "nearest"}:
+        how = "of its nearest band" if entry.method == "nearest" else "by the Serkowski law from its other bands"
+        return (
+            f"{name} in {filter_name or 'no filter'}: no tabulated value at {entry.wavelength:.2f} micron; taken {how}"
+        )
+    return ""

@@ -6,6 +6,7 @@ import time
 from collections.abc import Callable, Sequence
 from concurrent.futures import Executor, as_completed
 from dataclasses import dataclass
+from difflib import get_close_matches
 from pathlib import Path
 
 import numpy as np
@@ -91,7 +92,8 @@ class Night:
         executor : concurrent.futures.Executor, optional
             Runs the visits; in this process without one.
         only : sequence of str
-            Names of targets; standards are reduced all the same, since the calibration needs them.
+            Names of targets; standards are reduced all the same, since the calibration needs them, and visits that an
+            earlier run finished stay in the tables.
         fresh : bool
             Do not take up finished visits of an earlier run.
         write : bool
@@ -156,7 +158,7 @@ class Night:
         if not visits:
             raise InputError(_nothing(frames))
         catalogue = Catalogue.read(self.config.correction.catalogues)
-        tasks, roles = self._tasks(frames, visits, catalogue, only)
+        tasks, roles, others = self._tasks(frames, visits, catalogue, only)
         if standards_only:
             tasks = [task for task in tasks if any(role.entry is not None for role in roles[task.number])]
             if not tasks:
@@ -165,9 +167,10 @@ class Night:
         if progress is not None:
             progress(0, len(tasks), "masters")
         calibrator.prepare()
-        results, failed = self._run(tasks, executor, fresh, progress)
+        results, failed = self._run(tasks, executor, fresh, progress, others)
         results = self._share_gain(results)
-        notes = [*calibrator.warnings, *(role.note for listed in roles.values() for role in listed if role.note)]
+        notes = [*_unmatched(self.config, visits), *calibrator.warnings]
+        notes += [role.note for listed in roles.values() for role in listed if role.note]
         items = tuple(
             Measured(
                 name, result.task_number, result.fluxes.take_sources([s]), roles[result.task_number][s], result.drift[s]
@@ -179,12 +182,13 @@ class Night:
 
     def _tasks(
         self, frames: FrameSet, visits: list[FrameSet], catalogue: Catalogue, only: Sequence[str]
-    ) -> tuple[list[VisitTask], dict[int, list[Role]]]:
+    ) -> tuple[list[VisitTask], dict[int, list[Role]], set[int]]:
         config = self.config
         calibrator = self.calibrator(frames)
         tasks, roles = [], {}
         wanted = {normal_name(name): name for name in only}
         seen: set[str] = set()
+        others: set[int] = set()
         for visit in visits:
             number = int(visit.table["visit"][0])
             targets = targets_of(visit, config.targets)
@@ -192,7 +196,7 @@ class Night:
             names = {normal_name(t.name) for t in targets} | {normal_name(str(visit.table["object"][0]))}
             seen |= names & wanted.keys()
             if wanted and not names & wanted.keys() and all(role.entry is None for role in listed):
-                continue
+                others.add(number)
             roles[number] = listed
             tasks.append(
                 VisitTask(
@@ -210,18 +214,25 @@ class Night:
         for name in wanted.keys() - seen:
             known = ", ".join(sorted({str(v.table["object"][0]) for v in visits}))
             raise MissingError(f"--only {wanted[name]}: no such target in this night; it has {known}")
-        if not tasks:
-            raise InputError("nothing to reduce")
-        return tasks, roles
+        return tasks, roles, others
 
     def _run(
-        self, tasks: list[VisitTask], executor: Executor | None, fresh: bool, progress: Progress | None
+        self,
+        tasks: list[VisitTask],
+        executor: Executor | None,
+        fresh: bool,
+        progress: Progress | None,
+        others: set[int],
     ) -> tuple[list[VisitResult], dict[int, str]]:
         folder = self.config.output / CACHE / "visits"
         keys = {task.number: fingerprint(task) for task in tasks}
         found = {} if fresh else {t.number: r for t in tasks if (r := load(folder, keys[t.number])) is not None}
         failed: dict[int, str] = {}
-        waiting = [task for task in tasks if task.number not in found]
+        total = len(found) + sum(task.number not in found and task.number not in others for task in tasks)
+        # Visits that were not asked for stay in the tables where an earlier run finished them.
+        waiting = [task for task in tasks if task.number not in found and task.number not in others]
+        if found and progress is not None:
+            progress(len(found), len(found) + len(waiting), f"{len(found)} visits finished in an earlier run")
 
         def finished(task: VisitTask, outcome: VisitResult | HwpolError) -> None:
             if isinstance(outcome, VisitResult):
@@ -230,9 +241,7 @@ class Night:
             else:
                 failed[task.number] = str(outcome)
             if progress is not None:
-                progress(
-                    len(found) + len(failed), len(tasks), f"{task.targets[0].name} {task.frames.table['filter'][0]}"
-                )
+                progress(len(found) + len(failed), total, f"{task.targets[0].name} {task.frames.table['filter'][0]}")
 
         if executor is None:
             for task in waiting:
@@ -251,6 +260,19 @@ class Night:
         from hwpol.night.gains import share_gain
 
         return share_gain(results)
+
+
+def _unmatched(config: NightConfig, visits: Sequence[FrameSet]) -> list[str]:
+    """Targets of the night file that no science frame bears."""
+    names = {normal_name(str(visit.table["object"][0])): str(visit.table["object"][0]) for visit in visits}
+    words = []
+    for target in config.targets:
+        wanted = normal_name(target.object or target.name)
+        if wanted not in names:
+            near = get_close_matches(wanted, names, n=1)
+            hint = f"; did you mean {names[near[0]]!r}?" if near else ""
+            words.append(f"[[target]] {target.object or target.name!r} matches the object of no science frame{hint}")
+    return words
 
 
 def _attempt(task: VisitTask) -> VisitResult | HwpolError:
