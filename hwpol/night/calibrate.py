@@ -21,6 +21,10 @@ from hwpol.night.solve import solve_visit
 from hwpol.stokes import ROTATION_LIMIT, Stokes, mean_angle
 
 
+#: Part of the standards' distance from their values that must be left for another sense to be believed.
+AGREES = 0.2
+
+
 @dataclass(frozen=True)
 class Measured:
     """One target of one visit, as the calibration needs it: `fluxes` hold this source alone."""
@@ -94,6 +98,12 @@ def find_calibration(
     return calibration, [*notes, hint] if hint else notes
 
 
+def _distance(calibration: Calibration) -> float:
+    """Root mean square distance of the standards from their catalogue values (fraction)."""
+    rows = calibration.standards_table()
+    return float(np.sqrt(np.nanmean([row["dq"] ** 2 + row["du"] ** 2 for row in rows])))
+
+
 def _sense_hint(calibration: Calibration, standards: list[Standard], frame: str) -> str:
     """Words where the standards contradict each other and would agree if angles grew the other way; else empty."""
     chi2 = sum(model.chi2 for model in calibration.filters.values() if np.isfinite(model.chi2))
@@ -108,7 +118,7 @@ def _sense_hint(calibration: Calibration, standards: list[Standard], frame: str)
         other = Calibration.fit(mirrored, frame=frame)
     except HwpolError:
         return ""
-    if any(row.get("doubt") for row in other.standards_table()):
+    if not _distance(other) < AGREES * _distance(calibration):
         return (
             f"the standards contradict each other (chi2 {chi2:.0f} for {dof} degrees of freedom; {len(doubted)} are "
             "doubted): look at [wave_plate] values, zero and scale, at the beams' analysers and at the catalogues"
