@@ -20,7 +20,6 @@ from hwpol.night.roles import Role
 from hwpol.night.solve import solve_visit
 from hwpol.stokes import ROTATION_LIMIT, Stokes, mean_angle
 
-
 #: Part of the standards' distance from their values that must be left for another sense to be believed.
 AGREES = 0.2
 
