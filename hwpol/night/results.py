@@ -96,7 +96,7 @@ def assemble(
             solution,
             len(visit.names),
             calibration if known else None,
-            _wavelength(config, visit.filter),
+            _wavelength(config, visit.filter) if config.correction.foreground.wavelength is not None else None,
         )
         if foreground is not None:
             listed = roles[visit.task_number]
