@@ -64,7 +64,9 @@ def _score(survey: Survey, key: str, lit: list[int]) -> float:
     looks = sum(_is_filter(text) or is_clear(text) for text in texts) / len(texts)
     bands = any(_is_filter(text) for text in texts)
     numeric = all(as_number(text) == as_number(text) for text in texts)
-    if not (named or said) and (not bands or looks < 1.0 or numeric or len(texts) < 2):
+    # One value all night says little, unless it names a filter in so many words ("Bess V").
+    alone = len(texts) < 2 and not all(_WORDS.search(text) for text in texts)
+    if not (named or said) and (not bands or looks < 1.0 or numeric or alone):
         return 0.0
     stands = survey.share(key, lit)
     return 2.0 * named + 1.0 * said + 2.0 * looks * bands + 1.0 * (len(texts) > 1) + stands - 1.5 * numeric
