@@ -86,8 +86,10 @@ def test_profile_has_the_width_and_the_wings_that_were_measured(beta):
     placement = SimpleNamespace(fwhm=np.array([[seen, np.nan], [1.1 * seen, seen]]))
     profile = measured_profile(placement, radii, growth / growth[-1], 4.0)
     assert profile.beta == beta
-    # The pixel's own width makes measured widths scale not quite as true ones: 1 percent for a tenth.
-    np.testing.assert_allclose(profile.fwhm, [[true, true], [1.1 * true, true]], rtol=0.01)
+    # The pixel (variance 1/12) widens both: of widths that scale by 1.1 the measured ones scale by less.
+    scale = true / 2.355
+    pixel = abs(np.sqrt(1.1**2 * scale**2 + 1 / 12) / np.sqrt(scale**2 + 1 / 12) / 1.1 - 1)
+    np.testing.assert_allclose(profile.fwhm, [[true, true], [1.1 * true, true]], rtol=pixel)
     assert profile.fraction(2 * true) == pytest.approx(1 - (1 + 16 * (2 ** (1 / beta) - 1)) ** (1 - beta), rel=0.02)
 
 

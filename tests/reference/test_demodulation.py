@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from hwpol.demodulation import demodulate, modulation_rows
+from hwpol.demodulation import demodulate, fit_counts, half_turn_null, modulation_rows, photon_covariance
 from hwpol.fluxes import Fluxes
 from hwpol.stokes import position_angle, turn
 
@@ -163,3 +163,80 @@ def test_rotation_of_a_vector(angle, q, u):
     assert turned.imag == pytest.approx(u, abs=6e-12)
     start = position_angle(0.03 - 0.02j)
     assert (position_angle(turned) - start - angle + 90) % 180 - 90 == pytest.approx(0, abs=1e-9)
+
+
+def efficiencies(rows):
+    """eps_i = (n sum_j D_ij^2)^(-1/2) with D the pseudo-inverse of O, the n x 3 modulation matrix (I, Q, U)."""
+    matrix = np.concatenate([np.ones((len(rows), 1)), rows[:, :2]], axis=1)
+    return 1 / np.sqrt(len(rows) * np.sum(np.linalg.pinv(matrix) ** 2, axis=1)), np.linalg.cond(matrix)
+
+
+@pytest.mark.parametrize(
+    ("psi", "analyser", "retardance", "expected", "condition"),
+    [
+        ([0, 22.5, 45, 67.5], [0], 180, (1, 0.7071067812, 0.7071067812), 1.4142135624),
+        (np.arange(8) * 22.5, [0], 180, (1, 0.7071067812, 0.7071067812), 1.4142135624),
+        ([0, 22.5], [0, 90], 180, (1, 0.7071067812, 0.7071067812), 1.4142135624),
+        ([0, 22.5, 45], [0], 180, (0.8164965809, 0.8164965809, 0.4714045208), 2.4142135624),
+        ([0, 10, 20, 30], [0], 180, (0.2920888410, 0.3806200852, 0.2492668547), 6.9822627875),
+        ([0, 22.5, 45, 67.5], [0], 175, (0.9999963661, 0.7057614038, 0.7057614038), None),
+        ([0, 22.5, 45, 67.5], [0], 170, (0.9999414174, 0.7017355108, 0.7017355108), None),
+        ([0, 22.5, 45, 67.5], [0], 160, (0.9990347364, 0.6857849028, 0.6857849028), None),
+    ],
+)
+def test_efficiencies_of_sets_of_positions(psi, analyser, retardance, expected, condition):
+    # Definition of del Toro Iniesta & Collados 2000, Appl. Opt. 39, 1637 (from memory); numbers recomputed, ten digits.
+    rows = modulation_rows(psi, np.broadcast_to(analyser, (len(psi), len(analyser))), retardance).reshape(-1, 3)
+    found, number = efficiencies(rows)
+    assert np.allclose(found, expected, rtol=0, atol=1e-10)
+    if condition is not None:
+        assert number == pytest.approx(condition, abs=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("number", "q", "u"), [(16, 0.03, -0.02), (8, 0.03, -0.02), (4, 0.03187628504368, -0.01797342527067)]
+)
+def test_a_term_of_twice_the_plate_angle(number, q, u):
+    # F = 0.004 + 0.003 cos(2 psi + 0.3 rad) + 0.03 cos 4 psi - 0.02 sin 4 psi: gone with 8 and 16 positions, not with 4
+    # (derived; that 16 angles are Fourier-analysed: Patat & Taubenberger 2011, A&A 529, A57). The 4-position
+    # numbers are those of the plain Fourier sums, which the pairs of the difference method are.
+    psi = np.arange(number) * 22.5
+    angle = np.radians(psi)
+    f = 0.004 + 0.003 * np.cos(2 * angle + 0.3) + 0.03 * np.cos(4 * angle) - 0.02 * np.sin(4 * angle)
+    flux = 1e6 * np.stack([1 + f, 1 - f], axis=1)
+    # Equal weights of all F, as in the plain sums: var F is proportional to (o^2 + e^2) times the variance.
+    variance = np.broadcast_to(1e18 / np.sum(flux**2, axis=1, keepdims=True), flux.shape)
+    fluxes = Fluxes.from_arrays(flux, variance, wave_plate=psi, analyser=[0, 90])
+    stokes = demodulate(fluxes, method="double-difference")
+    assert stokes.q[0] == pytest.approx(q, abs=1e-12)
+    assert stokes.u[0] == pytest.approx(u, abs=1e-12)
+    if number == 8:
+        # The null shows what was removed: the halves are those of four positions, q of the first off by A (cos 0.3 -
+        # cos(0.3 + 90 deg)) / 2, of the second by as much the other way.
+        z, _ = half_turn_null(fluxes)
+        assert z[0, 0] == pytest.approx(0.03187628504368 - 0.03, abs=2e-5)
+        assert z[0, 1] == pytest.approx(-0.01797342527067 + 0.02, abs=2e-5)
+
+
+@pytest.mark.parametrize(
+    ("q", "u", "var_q", "var_u", "sigma_p"),
+    [
+        (0.0, 0.0, 1.0, 1.0, 0.00707106781187),
+        (0.03, -0.02, 0.9991, 0.9996, 0.00706842926736),
+        (0.3, 0.2, 0.91, 0.96, 0.00680214898170),
+        (0.6, 0.5, 0.64, 0.75, 0.00585270009147),
+    ],
+)
+def test_photon_limit_of_four_positions(q, u, var_q, var_u, sigma_p):
+    # Cramer-Rao bound for binomial counts, J = sum n/(1 - x^2) c c^T, gain known, 4 x 1e4 photons:
+    # var(q) = (2/N)(1 - q^2) (derived; agrees with the ALFOSC formula for p = 0); numbers recomputed.
+    rows = modulation_rows(PSI, np.broadcast_to([0, 90], (4, 2)))
+    flux = 5e3 * (1 + rows[..., 0] * q + rows[..., 1] * u)
+    fluxes = Fluxes.from_arrays(flux, flux, wave_plate=PSI, analyser=[0, 90])
+    stokes = demodulate(fluxes, gain="fixed")
+    assert stokes.covariance[0, 0, 0] * 2e4 == pytest.approx(var_q, abs=1e-10)
+    assert stokes.covariance[0, 1, 1] * 2e4 == pytest.approx(var_u, abs=1e-10)
+    if q or u:
+        assert stokes.p_err[0] == pytest.approx(sigma_p, abs=1e-12)
+    bound = photon_covariance(fluxes, fit_counts(fluxes, gain="fixed"), gain="fixed")
+    assert np.allclose(bound, stokes.covariance, rtol=1e-9, atol=0)
